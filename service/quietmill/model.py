@@ -4,7 +4,7 @@ Nothing here does I/O, reads a clock or imports another module of the package. T
 UTC everywhere inside; text appears only at the edges.
 """
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from enum import IntEnum
 from math import isfinite
@@ -114,7 +114,7 @@ LEVEL_RULES: Final = frozenset(
 
 HIGH: Final = 1
 LOW: Final = 2
-"""What a rule's function answers; shifted left by twice the rule's number it is that rule's pair in a word of rule bits."""
+"""What a rule's function answers; shifted left by twice the rule's number, its pair in a word of rule bits."""
 
 
 def rule_bits(rule: Rule, direction: int = HIGH) -> int:
@@ -239,13 +239,15 @@ class Verdicts:
     """What the bank says of a batch of n readings.
 
     `outcomes` has shape (n,) and holds an `Outcome` for each reading; `points` (m <= n) and `notices` (k) stand in
-    the order in which they arose; `recent` has shape (k, RECENT_POINTS).
+    the order in which they arose; `recent` has shape (k, RECENT_POINTS). `set_back` holds the indices of readings by
+    which a sender's clock was found set back; they are accepted.
     """
 
     outcomes: NDArray[np.uint8]
     points: Records
     notices: Records
     recent: Records
+    set_back: NDArray[np.int64]
 
 
 @dataclass(frozen=True, slots=True)
@@ -343,7 +345,9 @@ class Detector:
         for rule, number in self.rules.items():
             default, least, most = COUNTS.get(rule, (0, 0, 0))
             if rule not in NELSON or not least <= number <= most or (rule and number != int(number)):
-                raise ValueError(f"{rule.label}: number must be from {least} to {most}, is {number} (usually {default})")
+                raise ValueError(
+                    f"{rule.label}: number must be from {least} to {most}, is {number} (usually {default})"
+                )
         if self.side not in {"both", "high", "low"}:
             raise ValueError(f"side must be both, high or low, is {self.side}")
         if not 1 <= self.points_kept <= 1000:
@@ -355,15 +359,3 @@ class Detector:
     def width(self) -> float:
         """At how many sigma of the point the control limits stand."""
         return self.rules.get(Rule.BEYOND_LIMITS, COUNTS[Rule.BEYOND_LIMITS][0])
-
-
-def concatenate(parts: Sequence[Verdicts]) -> Verdicts:
-    """Join verdicts on the successive parts of one batch, whose indices already count through all parts."""
-    if len(parts) == 1:
-        return parts[0]
-    return Verdicts(
-        np.concatenate([part.outcomes for part in parts]),
-        np.concatenate([part.points for part in parts]),
-        np.concatenate([part.notices for part in parts]),
-        np.concatenate([part.recent for part in parts]),
-    )

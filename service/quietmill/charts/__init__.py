@@ -1,0 +1,1 @@
+"""The judging core: readings in, verdicts out, pure and compiled."""
