@@ -1,0 +1,127 @@
+"""Instants as integer microseconds UTC: read from RFC 3339 text or from a number, written as RFC 3339 text.
+
+Pure: no clock is read here. Everything is exact and rounds half to even, whatever the number of digits. Instants
+reach from the first microsecond of the year 1 to the last of the year 9999, as RFC 3339 can write them.
+"""
+
+import re
+from datetime import UTC, datetime, timedelta
+from decimal import MAX_EMAX, MAX_PREC, MIN_EMIN, ROUND_HALF_EVEN, Context, Decimal
+from functools import lru_cache
+from typing import Final
+
+__all__ = ["FIRST", "LAST", "MICROSECONDS_PER_SECOND", "UNITS", "format_time", "from_number", "parse_time"]
+
+MICROSECONDS_PER_SECOND: Final = 1_000_000
+
+FIRST: Final = -62_135_596_800_000_000
+"""0001-01-01T00:00:00Z."""
+
+LAST: Final = 253_402_300_799_999_999
+"""9999-12-31T23:59:59.999999Z."""
+
+UNITS: Final = {"s": 6, "ms": 3, "us": 0, "ns": -3}
+"""Units of a time that is a number, and by which power of ten they become microseconds."""
+
+MILLISECONDS_FROM: Final = 10**11
+"""From here on a number without a unit counts milliseconds: as seconds it would lie beyond the year 5100, as
+milliseconds it lies in 1973."""
+
+_EXACT: Final = Context(prec=MAX_PREC, Emax=MAX_EMAX, Emin=MIN_EMIN, rounding=ROUND_HALF_EVEN)
+_BOUND: Final = 10**21
+"""Beyond every instant in every unit."""
+
+_EPOCH: Final = datetime(1970, 1, 1, tzinfo=UTC)
+_RFC_3339: Final = re.compile(
+    r"([0-9]{4}-[0-9]{2}-[0-9]{2})[Tt ]([01][0-9]|2[0-3]):([0-5][0-9]):([0-5][0-9]|60)(?:\.([0-9]+))?"
+    r"(?:[Zz]|([+-])([01][0-9]|2[0-3]):([0-5][0-9]))"
+)
+
+
+def parse_time(text: str) -> int:
+    """Return the instant that an RFC 3339 time with its offset names, in microseconds UTC.
+
+    A space may stand for the `T`, as the RFC allows; a leap second is the first second of the next day. Raises
+    `ValueError` with what is wrong.
+
+    >>> parse_time("1970-01-01T01:00:00.25+01:00")
+    250000
+    """
+    match = _RFC_3339.fullmatch(text)
+    if match is None:
+        raise ValueError(f"must be an RFC 3339 time with an offset, such as 2026-03-02T08:14:30Z, is {text[:80]!r}")
+    date, hour, minute, second, fraction, sign, offset_hour, offset_minute = match.groups()
+    seconds = _midnight(date) + 3600 * int(hour) + 60 * int(minute) + int(second)
+    if sign:
+        offset = 3600 * int(offset_hour) + 60 * int(offset_minute)
+        seconds += offset if sign == "-" else -offset
+    if second == "60" and seconds % 86_400:
+        raise ValueError(f"must have its second 60 at the end of a UTC day, is {text[:80]!r}")
+    instant = seconds * MICROSECONDS_PER_SECOND
+    if fraction:
+        # A whole second is an even number of microseconds, so the fraction may be rounded by itself.
+        instant += int(fraction.ljust(6, "0")) if len(fraction) <= 6 else _shifted(Decimal(f"0.{fraction}"), 6)
+    return _checked(instant, text)
+
+
+def from_number(number: float | Decimal, unit: str | None = None) -> int:
+    """Return the instant that a number names, in microseconds UTC.
+
+    `unit` is one of `UNITS`; without one a number below 1e11 counts Unix seconds, and milliseconds from there on.
+    Give an `int` or a `Decimal` where every digit matters: a float has lost its last ones already. Raises
+    `ValueError` for what is not finite, outside the years 1 to 9999, or of an unknown unit.
+
+    >>> from_number(1772439270), from_number(1772439270250), from_number(Decimal("0.0000025"), "s")
+    (1772439270000000, 1772439270250000, 2)
+    """
+    if number != number:  # NaN, that as a Decimal refuses to be compared in size
+        raise ValueError(_out_of_range(number))
+    if unit is None:
+        power = 3 if number >= MILLISECONDS_FROM else 6
+    elif unit in UNITS:
+        power = UNITS[unit]
+    else:
+        raise ValueError(f"the unit of a time must be one of {', '.join(UNITS)}, is {unit!r}")
+    if isinstance(number, int) and power >= 0:
+        return _checked(number * 10**power, number)
+    exact = Decimal(number)
+    # Bounded before it is rounded: 1e999999 as an integer would fill the memory.
+    if not -_BOUND < exact < _BOUND:
+        raise ValueError(_out_of_range(number))
+    return _checked(_shifted(exact, power), number)
+
+
+def format_time(instant: int) -> str:
+    """Return an instant as RFC 3339 text with `Z` and only the digits needed; raises `ValueError` out of range.
+
+    >>> format_time(1_772_439_270_250_000)
+    '2026-03-02T08:14:30.25Z'
+    """
+    text = (_EPOCH + timedelta(microseconds=_checked(instant, instant))).replace(tzinfo=None).isoformat()
+    return f"{text.rstrip('0')}Z" if "." in text else f"{text}Z"
+
+
+@lru_cache(maxsize=64)
+def _midnight(date: str) -> int:
+    """Return the Unix seconds at which a day begins."""
+    try:
+        return (datetime.fromisoformat(date).replace(tzinfo=UTC) - _EPOCH).days * 86_400
+    except ValueError:
+        raise ValueError(f"must be a day of the calendar, is {date!r}") from None
+
+
+def _shifted(number: Decimal, power: int) -> int:
+    """Return number x 10^power, rounded half to even, exactly."""
+    return int(_EXACT.to_integral_value(_EXACT.scaleb(number, power)))
+
+
+def _checked(instant: int, origin: object) -> int:
+    if FIRST <= instant <= LAST:
+        return instant
+    raise ValueError(_out_of_range(origin))
+
+
+def _out_of_range(origin: object) -> str:
+    # An integer of thousands of digits has no decimal text within Python's own bound.
+    shown = hex(origin)[:40] if isinstance(origin, int) and origin.bit_length() > 128 else str(origin)[:40]
+    return f"must lie in the years 1 to 9999, is {shown}"
