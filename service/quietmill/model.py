@@ -9,7 +9,7 @@ from dataclasses import dataclass, field
 from enum import IntEnum
 from math import isfinite
 from types import MappingProxyType
-from typing import Final
+from typing import Final, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -234,8 +234,7 @@ RECENT_POINTS: Final = 25
 RECENT: Final = np.dtype([("number", np.int64), ("time", np.int64), ("value", np.float64)])
 
 
-@dataclass(frozen=True, slots=True)
-class Verdicts:
+class Verdicts(NamedTuple):
     """What the bank says of a batch of n readings.
 
     `outcomes` has shape (n,) and holds an `Outcome` for each reading; `points` (m <= n) and `notices` (k) stand in

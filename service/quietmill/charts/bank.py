@@ -1,7 +1,7 @@
 """The bank of detectors: every characteristic a row, and one compiled walk over the readings of a batch."""
 
 from collections.abc import Sequence
-from math import isnan, nan
+from math import nan
 from typing import Any, Final
 
 import numpy as np
@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from quietmill.charts import rules
 from quietmill.charts.arrival import SET_BACK, arrive
-from quietmill.charts.compiler import Record, attributes, compiled
+from quietmill.charts.compiler import COMPILED, Record, attributes, compiled
 from quietmill.charts.cusum import cusum
 from quietmill.charts.episode import follow, tell
 from quietmill.charts.ewma import ewma
@@ -54,39 +54,44 @@ ROUNDING: Final = 2.0**-50
 NOTICES_AT_ONCE: Final = 256
 """The walk pauses when so many notices wait to be taken; results do not depend on it."""
 
+POINTS_ON_A_SHEET: Final = 1024
+"""Points are allocated so many at once: an allocation a reading would cost more than judging it."""
+
 NO_INDICES: Final = np.empty(0, np.int64)
 NO_NOTICES: Final = np.empty(0, NOTICE)
 NO_RECENT: Final = np.empty((0, RECENT_POINTS), RECENT)
 
 
 @compiled
-def spread_rule(row: Record, state: Record, eps: float) -> int:
-    """The spread statistic (the moving range of two) lies beyond its own limits; on the limit: no."""
-    if isnan(state.spread):
-        return 0
-    if (state.spread - row.spread_upper) / row.sigma > eps:
+def width_of_lines(row: Record, value: float) -> float:
+    """Return half the width of a line at a value, on the scale of z."""
+    rounding = ROUNDING * (abs(value) + abs(row.centre))
+    return rounding / row.sigma if rounding > LINE * row.sigma else LINE
+
+
+@compiled
+def beyond_spread(row: Record, spread: float, eps: float) -> int:
+    """The spread statistic (the moving range of two) lies beyond its own limits; on the limit, or none yet: no."""
+    if spread - row.spread_upper > eps * row.sigma:
         return HIGH
-    if (row.spread_lower - state.spread) / row.sigma > eps:  # false where the limit is NaN
+    if row.spread_lower - spread > eps * row.sigma:
         return LOW
     return 0
 
 
 @compiled
-def judge_point(row: Record, state: Record, pool: Record, time: int, value: float) -> int:
+def judge_point(row: Record, state: Record, pool: Record, time: int, value: float, spread: float) -> int:
     """Move a row by one point; return the rules that hold at it.
 
     z = (value - centre) / sigma. Every rule sees every point, whether it is used or not; `row.mask` says which may
-    hold. A gap clears the windows of rules, never EWMA or CUSUM.
+    hold. `spread` is NaN where there is none.
     """
-    if row.gap > 0 and state.number >= state.first and time - state.point_time > row.gap:
-        rules.clear(state)
     deviation = value - row.centre
     z = deviation / row.sigma
-    eps = max(LINE, ROUNDING * (abs(value) + abs(row.centre)) / row.sigma)
+    eps = width_of_lines(row, value)
     state.number += 1
     if state.number == state.first:
         state.start = time
-    state.spread = abs(value - state.value) if state.seen > 0 else nan
     bits = rules.beyond_limits(row, state, z, eps) << BEYOND_LIMITS
     bits |= rules.same_side(row, state, z, eps) << SAME_SIDE
     bits |= rules.trend(row, state, z, eps) << TREND
@@ -99,7 +104,7 @@ def judge_point(row: Record, state: Record, pool: Record, time: int, value: floa
         bits |= ewma(row, state, z, eps) << EWMA
     if row.h > 0.0:
         bits |= cusum(row, state, z, eps, state.number, time, deviation) << CUSUM
-    bits |= spread_rule(row, state, eps) << SPREAD
+    bits |= beyond_spread(row, spread, eps) << SPREAD
     state.seen += 1
     state.z = z
     state.value = value
@@ -112,7 +117,7 @@ def judge_point(row: Record, state: Record, pool: Record, time: int, value: floa
 
 
 @compiled
-def write_point(row: Record, state: Record, point: Record, index: int, reading: int, bits: int) -> None:
+def write_point(row: Record, state: Record, point: Record, index: int, reading: int, spread: float, bits: int) -> None:
     """Write what was judged at the row's newest point."""
     point.row = index
     point.reading = reading
@@ -123,9 +128,9 @@ def write_point(row: Record, state: Record, point: Record, index: int, reading: 
     point.centre = row.centre
     point.sigma = row.sigma
     point.z = state.z
-    point.lower = row.lower
-    point.upper = row.upper
-    point.spread = state.spread
+    point.lower = row.centre - row.width * row.sigma
+    point.upper = row.centre + row.width * row.sigma
+    point.spread = spread
     point.spread_lower = row.spread_lower
     point.spread_upper = row.spread_upper
     point.ewma = row.centre + state.ewma * row.sigma if row.lam > 0.0 else nan
@@ -167,8 +172,11 @@ def judge(
             set_back += 1
         elif outcome != ACCEPTED:
             continue
-        bits = judge_point(row, state, pool, reading.time, reading.value)
-        write_point(row, state, points[made], index, place, bits)
+        if row.gap > 0 and state.seen > 0 and reading.time - state.point_time > row.gap:
+            rules.clear(state)
+        spread = abs(reading.value - state.value) if state.seen > 0 else nan
+        bits = judge_point(row, state, pool, reading.time, reading.value, spread)
+        write_point(row, state, points[made], index, place, spread, bits)
         members = state.members if state.open else 0
         kind = follow(row, state, bits)
         if kind:
@@ -198,6 +206,7 @@ class Bank:
         self.rows = attributes(pack(detectors))
         self.state = attributes(fresh_state(self.rows))
         self.pool = attributes(fresh_pool(self.rows))
+        self._sheet = attributes(np.empty(POINTS_ON_A_SHEET, POINT))  # blank; verdicts are cut from it, never reused
         self._notices = attributes(np.zeros(NOTICES_AT_ONCE, NOTICE))
         self._recent = attributes(np.zeros((NOTICES_AT_ONCE, RECENT_POINTS), RECENT))
 
@@ -207,9 +216,12 @@ class Bank:
         How a series is cut into batches makes no difference. The rows of `readings` are trusted to exist.
         """
         count = len(readings)
-        readings = attributes(readings)
+        if not COMPILED:
+            readings = attributes(readings)
         outcomes = np.empty(count, np.uint8)
-        points = attributes(np.empty(count, POINT))
+        if count > len(self._sheet):
+            self._sheet = attributes(np.empty(max(count, POINTS_ON_A_SHEET), POINT))
+        points, self._sheet = self._sheet[:count], self._sheet[count:]
         told: list[NDArray[Any]] = []
         shown: list[NDArray[Any]] = []
         place = made = set_back = 0
@@ -225,5 +237,8 @@ class Bank:
         if set_back:
             clocks = np.flatnonzero(outcomes & SET_BACK)
             outcomes &= SET_BACK - 1
-        notices = np.concatenate(told) if told else NO_NOTICES
-        return Verdicts(outcomes, points[:made], notices, np.concatenate(shown) if told else NO_RECENT, clocks)
+        if made < count:
+            points = points[:made]
+        if not told:
+            return Verdicts(outcomes, points, NO_NOTICES, NO_RECENT, clocks)
+        return Verdicts(outcomes, points, np.concatenate(told), np.concatenate(shown), clocks)

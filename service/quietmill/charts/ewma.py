@@ -24,15 +24,16 @@ def ewma(row: Record, state: Record, z: float, eps: float) -> int:
     the first point; asymptotic limits drop the last factor. A small lambda remembers longer and finds smaller
     shifts. Roberts, Technometrics 1 (1959) 239-250; Lucas and Saccucci, Technometrics 32 (1990) 1-12.
     """
-    average = row.lam * z + row.keep * state.ewma
+    keep = 1.0 - row.lam
+    average = row.lam * z + keep * state.ewma
     if abs(average) < NOTHING_LEFT:
         average = 0.0
-    decay = state.decay * row.keep_squared
+    decay = state.decay * (keep * keep)
     if decay < NO_DECAY_LEFT:
         decay = 0.0
     state.ewma = average
     state.decay = decay
-    limit = row.ewma_width * sqrt(1.0 - decay)
+    limit = row.ewma_width * sqrt(1.0 - decay) if decay > 0.0 else row.ewma_width
     if average - limit > eps:
         return HIGH
     if -average - limit > eps:

@@ -1,7 +1,6 @@
 """How a characteristic lies in memory: a record of settings, a record of state, and its share of the kept points.
 
-Arrays of structs, so that judging a point touches a few cache lines. Whole numbers are 64 bits wide, so that plain
-Python and compiled code count alike.
+Arrays of structs, so that judging a point touches a few cache lines.
 """
 
 from collections.abc import Sequence
@@ -19,34 +18,31 @@ ROW: Final = np.dtype(
     [
         ("centre", np.float64),
         ("sigma", np.float64),  # of the point
-        ("mask", np.int64),  # rule bits that may hold: the rules in use, in the directions that may signal
         ("width", np.float64),  # multiple of sigma of beyond_limits and of the control limits
-        ("lower", np.float64),
-        ("upper", np.float64),
-        ("same_side", np.int64),  # counts of points
-        ("stratification", np.int64),
-        ("mixture", np.int64),
         ("lam", np.float64),  # 0: no EWMA
-        ("keep", np.float64),  # 1 - lambda
-        ("keep_squared", np.float64),
         ("ewma_width", np.float64),  # L sqrt(lambda / (2 - lambda))
-        ("ewma_exact", np.int64),
         ("k", np.float64),
         ("h", np.float64),  # 0: no CUSUM
-        ("head_start", np.float64),
         ("cap", np.float64),  # ceiling times h
         ("spread_lower", np.float64),  # in the unit, NaN where it cannot be reached
         ("spread_upper", np.float64),
         ("gap", np.int64),  # microseconds; 0: none
-        ("quiet_points", np.int64),
-        ("kept", np.int64),  # points kept, and where they begin in the pool
-        ("pool", np.int64),
-        ("timed", np.int64),
-        ("sequenced", np.int64),
+        ("pool", np.int64),  # where the row's kept points begin in the pool
+        ("kept", np.int32),  # how many there may be
+        ("mask", np.int32),  # rule bits that may hold: the rules in use, in the directions that may signal
+        ("same_side", np.int32),  # counts of points
+        ("stratification", np.int32),
+        ("mixture", np.int32),
+        ("quiet_points", np.int32),
+        ("timed", np.int32),
+        ("sequenced", np.int32),
         ("sequence_fall", np.int64),  # a counter that falls further has started again
-    ]
+        ("head_start", np.float64),
+        ("ewma_exact", np.float64),  # 1 or 0: the decay before the first point
+    ],
+    align=True,
 )
-"""Settings of a row, read only while judging."""
+"""Settings of a row, read only while judging; what every point needs lies first."""
 
 STATE: Final = np.dtype(
     [
@@ -57,48 +53,45 @@ STATE: Final = np.dtype(
         ("last_sequence", np.int64),
         ("last_fingerprint", np.uint64),
         ("late", np.int64),  # late readings in a row whose own times rise
-        ("late_time", np.int64),  # of the last of them
-        ("late_first_time", np.int64),
-        ("late_first_arrival", np.int64),
         # points
         ("number", np.int64),
-        ("first", np.int64),  # number and time of the first point since the detector's start
-        ("start", np.int64),
+        ("first", np.int64),  # number of the first point since the detector's start
         ("point_time", np.int64),
         ("value", np.float64),
-        ("spread", np.float64),  # NaN: none
         # windows of rules, cleared by a gap
-        ("seen", np.int64),  # points in them
         ("z", np.float64),  # of the last point
-        ("side_run", np.int64),  # signed
-        ("trend_run", np.int64),  # signed
-        ("alternating_run", np.int64),
-        ("alternating_move", np.int64),
-        ("above_two", np.int64),  # the last three points, a bit each, the newest lowest
-        ("below_two", np.int64),
-        ("above_one", np.int64),  # the last five
-        ("below_one", np.int64),
-        ("within_run", np.int64),
-        ("outside_run", np.int64),
+        ("seen", np.int32),  # points in them
+        ("side_run", np.int32),  # signed
+        ("trend_run", np.int32),  # signed
+        ("alternating_run", np.int32),
+        ("alternating_move", np.int32),
+        ("above_two", np.int32),  # the last three points, a bit each, the newest lowest
+        ("below_two", np.int32),
+        ("above_one", np.int32),  # the last five
+        ("below_one", np.int32),
+        ("within_run", np.int32),
+        ("outside_run", np.int32),
+        # episode
+        ("quiet", np.int32),  # points in a row without a rule holding
+        ("open", np.int32),
+        ("members", np.int32),
         # EWMA and CUSUM, which no gap clears
         ("ewma", np.float64),  # of z
         ("decay", np.float64),  # (1 - lambda)^(2t)
         ("cusum_high", np.float64),
-        ("high_count", np.int64),  # points since the arm's last zero, the first one's number and time,
-        ("high_number", np.int64),
-        ("high_time", np.int64),
+        ("high_count", np.int64),  # points since the arm's last zero,
         ("high_sum", np.float64),  # their deviations from the centre, in the unit and in sigmas
         ("high_sum_z", np.float64),
         ("cusum_low", np.float64),
         ("low_count", np.int64),
-        ("low_number", np.int64),
-        ("low_time", np.int64),
         ("low_sum", np.float64),
         ("low_sum_z", np.float64),
-        # episode
-        ("open", np.int64),
-        ("quiet", np.int64),  # points in a row without a rule holding
-        ("members", np.int64),
+        ("high_number", np.int64),  # number and time of the arm's first point since its last zero
+        ("high_time", np.int64),
+        ("low_number", np.int64),
+        ("low_time", np.int64),
+        # what only an episode, a start or a late reading touches
+        ("start", np.int64),  # time of the first point since the detector's start
         ("order", np.int64),
         ("raised_number", np.int64),
         ("raised_time", np.int64),
@@ -108,9 +101,13 @@ STATE: Final = np.dtype(
         ("shift_sigma", np.float64),
         ("returned", np.int64),  # number and time of the point at which the last episode returned
         ("returned_time", np.int64),
-    ]
+        ("late_time", np.int64),  # of the last late reading in the row, and of the first with its arrival
+        ("late_first_time", np.int64),
+        ("late_first_arrival", np.int64),
+    ],
+    align=True,
 )
-"""Memory of a row, moved only by judging."""
+"""Memory of a row, moved only by judging; what every point touches lies first."""
 
 KEPT: Final = np.dtype([("time", np.int64), ("value", np.float64), ("z", np.float64)])
 """A kept point; that of number n lies at n modulo the row's share of the pool."""
@@ -142,14 +139,10 @@ def pack(detectors: Sequence[Detector]) -> NDArray[np.void]:
         for name in ("centre", "sigma", "width", "gap", "quiet_points", "timed", "sequenced"):
             row[name] = getattr(detector, name)
         row["mask"] = mask_of(detector)
-        row["lower"] = detector.centre - detector.width * detector.sigma
-        row["upper"] = detector.centre + detector.width * detector.sigma
         for rule in (Rule.SAME_SIDE, Rule.STRATIFICATION, Rule.MIXTURE):
             row[rule.label] = detector.rules.get(rule, COUNTS[rule][0])
         if ewma is not None:
             row["lam"] = ewma.lam
-            row["keep"] = 1 - ewma.lam
-            row["keep_squared"] = (1 - ewma.lam) * (1 - ewma.lam)
             row["ewma_width"] = ewma.width * sqrt(ewma.lam / (2 - ewma.lam))
             row["ewma_exact"] = ewma.exact
         if cusum is not None:
@@ -169,7 +162,7 @@ def fresh_state(rows: NDArray[np.void]) -> NDArray[np.void]:
     state = np.zeros(len(rows), STATE)
     for name in ("last_time", "last_sequence", "start", "point_time", "raised_time", "onset_time", "returned_time"):
         state[name] = NO_TIME
-    for name in ("value", "spread", "shift", "shift_sigma"):
+    for name in ("value", "shift", "shift_sigma"):
         state[name] = nan
     state["first"] = 1
     state["last_message"] = -1
