@@ -8,9 +8,19 @@ import re
 from datetime import UTC, datetime, timedelta
 from decimal import MAX_EMAX, MAX_PREC, MIN_EMIN, ROUND_HALF_EVEN, Context, Decimal
 from functools import lru_cache
+from math import isnan, ulp
 from typing import Final
 
-__all__ = ["FIRST", "LAST", "MICROSECONDS_PER_SECOND", "UNITS", "format_time", "from_number", "parse_time"]
+__all__ = [
+    "FIRST",
+    "LAST",
+    "MICROSECONDS_PER_SECOND",
+    "UNITS",
+    "format_time",
+    "from_float",
+    "from_number",
+    "parse_time",
+]
 
 MICROSECONDS_PER_SECOND: Final = 1_000_000
 
@@ -74,14 +84,9 @@ def from_number(number: float | Decimal, unit: str | None = None) -> int:
     >>> from_number(1772439270), from_number(1772439270250), from_number(Decimal("0.0000025"), "s")
     (1772439270000000, 1772439270250000, 2)
     """
-    if number != number:  # NaN, that as a Decimal refuses to be compared in size
+    if not isinstance(number, int) and isnan(number):  # as a Decimal it refuses to be compared
         raise ValueError(_out_of_range(number))
-    if unit is None:
-        power = 3 if number >= MILLISECONDS_FROM else 6
-    elif unit in UNITS:
-        power = UNITS[unit]
-    else:
-        raise ValueError(f"the unit of a time must be one of {', '.join(UNITS)}, is {unit!r}")
+    power = _power(number, unit)
     if isinstance(number, int) and power >= 0:
         return _checked(number * 10**power, number)
     exact = Decimal(number)
@@ -89,6 +94,29 @@ def from_number(number: float | Decimal, unit: str | None = None) -> int:
     if not -_BOUND < exact < _BOUND:
         raise ValueError(_out_of_range(number))
     return _checked(_shifted(exact, power), number)
+
+
+def from_float(number: float, unit: str | None = None) -> int | None:
+    """Return the instant of a number that was rounded to a float, if its lost digits cannot matter; else None.
+
+    Whatever decimal text reads as this float then names the same microsecond. Where None is returned, the answer
+    depends on the text itself, or is out of range: ask `from_number` with a `Decimal` of it. Times of today with up to
+    six digits behind the point of a second are always told.
+
+    >>> from_float(1772439270.251234), from_float(1772439270.2512345)
+    (1772439270251234, None)
+    """
+    power = _power(number, unit)
+    if power < 0 or number == MILLISECONDS_FROM:
+        return None
+    scale = 10.0**power
+    microseconds = number * scale
+    if not abs(microseconds) < -FIRST:
+        return None
+    nearest = round(microseconds)
+    # Half a unit in the last place was lost when the text was rounded, and as much again by the multiplication.
+    error = (ulp(number) * scale + ulp(microseconds)) / 2
+    return nearest if abs(microseconds - nearest) + error < 0.5 else None
 
 
 def format_time(instant: int) -> str:
@@ -99,6 +127,15 @@ def format_time(instant: int) -> str:
     """
     text = (_EPOCH + timedelta(microseconds=_checked(instant, instant))).replace(tzinfo=None).isoformat()
     return f"{text.rstrip('0')}Z" if "." in text else f"{text}Z"
+
+
+def _power(number: float | Decimal, unit: str | None) -> int:
+    """Return by which power of ten a number becomes microseconds."""
+    if unit is None:
+        return 3 if number >= MILLISECONDS_FROM else 6
+    if unit in UNITS:
+        return UNITS[unit]
+    raise ValueError(f"the unit of a time must be one of {', '.join(UNITS)}, is {unit!r}")
 
 
 @lru_cache(maxsize=64)

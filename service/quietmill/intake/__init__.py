@@ -1,0 +1,1 @@
+"""From MQTT messages to readings: the broker, topics to characteristics, payload formats, screening."""
