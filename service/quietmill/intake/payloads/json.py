@@ -126,7 +126,7 @@ class JsonReader:
         number = self._number(member)
         if isinstance(number, float) and isfinite(number):
             raise _DigitsLostError
-        if number is None or not abs(number) <= _LARGEST_SEQUENCE or number != int(number):
+        if number is None or not -_LARGEST_SEQUENCE <= number <= _LARGEST_SEQUENCE or number != int(number):
             return None
         return int(number)
 
@@ -169,12 +169,13 @@ def _to_float(number: float | Decimal) -> float:
 
 def _too_deep(document: object) -> bool:
     level = [document]
-    for _ in range(MAX_DEPTH + 1):
+    for _ in range(MAX_DEPTH):
         level = [
             child
             for node in level
-            if isinstance(node, dict | list)
+            if isinstance(node, (dict, list))
             for child in (node.values() if isinstance(node, dict) else node)
+            if isinstance(child, (dict, list))
         ]
         if not level:
             return False
