@@ -100,8 +100,8 @@ def from_float(number: float, unit: str | None = None) -> int | None:
     """Return the instant of a number that was rounded to a float, if its lost digits cannot matter; else None.
 
     Whatever decimal text reads as this float then names the same microsecond. Where None is returned, the answer
-    depends on the text itself, or is out of range: ask `from_number` with a `Decimal` of it. Times of today with up to
-    six digits behind the point of a second are always told.
+    depends on the text itself, or is out of range: ask `from_number` with a `Decimal` of it. Until 2038 times with up
+    to six digits behind the point of a second are always told.
 
     >>> from_float(1772439270.251234), from_float(1772439270.2512345)
     (1772439270251234, None)
