@@ -158,6 +158,7 @@ def test_an_unknown_unit_is_refused_with_those_that_are_known() -> None:
 @given(st.decimals(-(6 * 10**10), 25 * 10**10, places=9), st.sampled_from([None, *UNITS]))
 @example(Decimal("99999999999.9999999999"), None)
 @example(Decimal("1740902400.12345650001"), None)
+@example(Decimal("5000000000.0000005"), "s")
 def test_a_float_is_only_trusted_where_its_lost_digits_cannot_matter(number: Decimal, unit: str | None) -> None:
     assert from_float(float(number), unit) in {None, from_number(number, unit)}
 
