@@ -20,9 +20,6 @@ __all__ = ["MAX_PAYLOAD_BYTES", "Decoded", "Note", "Routes"]
 MAX_PAYLOAD_BYTES: Final = 256 * 1024
 """A longer payload is refused unread."""
 
-ONCE_A_MESSAGE: Final = frozenset({Outcome.RETAINED, Outcome.NOT_JSON, Outcome.TOO_LARGE, Outcome.UNROUTED})
-"""Outcomes of a whole message, however many characteristics wait for it."""
-
 SCREENED: Final[Mapping[Outcome, str]] = MappingProxyType(
     {
         Outcome.NOT_A_NUMBER: "a value that is finite after scaling",
@@ -133,9 +130,9 @@ class Routes:
         for kind, tags in route:
             document = kind.parse(payload)
             if isinstance(document, Refusal):
-                if not (unreadable and document.outcome in ONCE_A_MESSAGE):
+                if not unreadable:
                     batch.refuse(document, message)
-                unreadable = unreadable or document.outcome in ONCE_A_MESSAGE
+                unreadable = True
                 continue
             for row, reader, _ in tags:
                 for sample in reader.read(document, payload):

@@ -27,9 +27,10 @@ class Reader(Protocol):
 
     @staticmethod
     def parse(payload: bytes) -> object:
-        """Return the document in a payload, or the `Refusal` that holds for whoever wants to read it.
+        """Return the document in a payload, or the `Refusal` of a payload that nobody can read.
 
-        It is called once a message for all characteristics of a topic whose readers share it.
+        It is called once a message for all characteristics of a topic that have this format, and its refusal counts
+        once a message too.
         """
         ...
 
