@@ -17,7 +17,7 @@ PLANT = Routes(
     [
         characteristic("number", "number"),
         characteristic("json", "json", value="/force", time="/at", sequence="/n"),
-        characteristic("root", "root", value="", parse_strings=True),
+        characteristic("root", "root", value="", strings="parse"),
         characteristic("array", "array", array="/batch", value="/v", time="/t"),
         characteristic("first", "shared", value="/force"),
         characteristic("second", "shared", value="/moisture", time="/at"),

@@ -174,8 +174,3 @@ def test_what_the_log_shows_is_printable_and_bounded(content: bytes, topic: str)
         assert note.topic.isprintable()
         assert len(note.text) < 400
         assert len(note.topic) <= 80
-
-
-def test_a_pointer_that_is_none_is_refused_when_the_routes_are_made() -> None:
-    with pytest.raises(ValueError, match="must be empty or begin with /"):
-        Routes([characteristic(value="force")])

@@ -2,28 +2,11 @@
 
 from quietmill.intake.message import Message
 from quietmill.intake.routes import Decoded
-from quietmill.model import Detector
 from quietmill.settings import Baseline, Characteristic, Payload
 
 TOPIC = "tiles/press/1/force"
 ARRIVAL = 1_772_439_270_000_000  # 2026-03-02T08:14:30Z
 JSON = {"value": "/force", "time": "/at"}
-
-
-def payload(**keys: object) -> Payload:
-    """What a characteristic's `payload` says, and nothing where it says nothing."""
-    silent = {
-        "value": None,
-        "time": None,
-        "sequence": None,
-        "array": None,
-        "time_unit": None,
-        "sequence_size": None,
-        "parse_strings": False,
-        "scale": 1.0,
-        "offset": 0.0,
-    }
-    return Payload(**(silent | keys))
 
 
 def characteristic(
@@ -35,19 +18,12 @@ def characteristic(
     sigma: float = 2.0,
     **keys: object,
 ) -> Characteristic:
-    """A characteristic whose payload is the number itself, unless `keys` say where in JSON things stand."""
+    """A characteristic whose payload is the number itself, unless `keys` of `payload` say otherwise."""
     return Characteristic(
         id=id,
         topic=topic,
-        payload=payload(**keys) if keys else None,
-        unit="kN",
-        kind="individuals",
-        baseline=Baseline(centre=centre, sigma=sigma, version="00000000"),
-        detector=Detector(centre=centre, sigma=sigma),
-        favourable="none",
-        specification=None,
-        reaction=None,
-        labels={},
+        payload=Payload(**keys) if keys else None,
+        baseline=Baseline(centre=centre, sigma=sigma),
         retained=retained,
     )
 

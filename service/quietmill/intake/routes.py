@@ -69,7 +69,7 @@ class Routes:
     """Knows which characteristics each topic feeds and how their readings are read from its payloads.
 
     Rows are positions in `characteristics`. Nothing is remembered from message to message: how a stream is cut into
-    batches makes no difference. Raises `ValueError` for a JSON Pointer that is none.
+    batches makes no difference.
     """
 
     def __init__(self, characteristics: Sequence[Characteristic]) -> None:

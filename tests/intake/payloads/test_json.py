@@ -5,10 +5,10 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from intake.wiring import payload
 from quietmill.intake.payloads.format import Refusal
 from quietmill.intake.payloads.json import MAX_DEPTH, JsonReader
 from quietmill.model import NO_TIME
+from quietmill.settings import Payload
 
 TIME = 1_772_439_270_250_000
 
@@ -19,7 +19,7 @@ def answers_to(content: str | bytes, **keys: object) -> list[object]:
     document = JsonReader.parse(data)
     if isinstance(document, Refusal):
         return [document.outcome.label]
-    samples = JsonReader(payload(**keys)).read(document, data)
+    samples = JsonReader(Payload(**keys)).read(document, data)
     return [sample.outcome.label if isinstance(sample, Refusal) else sample for sample in samples]
 
 
@@ -217,17 +217,17 @@ def test_a_sequence_that_is_no_whole_number_of_63_bits_is_not_a_number(member: s
 
 
 def test_with_strings_parse_text_is_taken_as_the_number_it_holds() -> None:
-    assert value_of('" 12.5 "', parse_strings=True) == 12.5
-    assert time_of('"1740902400.1234565"', parse_strings=True) == 1740902400_123456
-    assert time_of('"2026-03-02T08:14:30.25Z"', parse_strings=True) == TIME
-    assert sequence_of('"17"', parse_strings=True) == 17
+    assert value_of('" 12.5 "', strings="parse") == 12.5
+    assert time_of('"1740902400.1234565"', strings="parse") == 1740902400_123456
+    assert time_of('"2026-03-02T08:14:30.25Z"', strings="parse") == TIME
+    assert sequence_of('"17"', strings="parse") == 17
 
 
 @pytest.mark.parametrize(
     "member", ['""', '"12,5"', '"1_000"', '"NaN"', '"Infinity"', '"+1"', '"12.5 kN"', "true", "null"]
 )
 def test_with_strings_parse_text_still_follows_the_grammar_of_numbers(member: str) -> None:
-    assert value_of(member, parse_strings=True) == "not_a_number"
+    assert value_of(member, strings="parse") == "not_a_number"
 
 
 def test_an_array_gives_one_reading_an_item_in_its_order() -> None:

@@ -25,12 +25,8 @@ READERS: Final[Mapping[str, Callable[[Payload], Reader]]] = MappingProxyType(
 
 
 def format_of(payload: Payload) -> str:
-    """Return the name of the format that a characteristic's settings ask for.
-
-    Whoever says where in a message something stands, or how its strings are to be taken, expects JSON.
-    """
-    pointers = (payload.value, payload.time, payload.sequence, payload.array)
-    return "json" if payload.parse_strings or any(pointer is not None for pointer in pointers) else "number"
+    """Return the name of the format that settings ask for: who says where a value stands expects JSON."""
+    return "number" if payload.value is None else "json"
 
 
 def reader_of(payload: Payload | None) -> Reader:
