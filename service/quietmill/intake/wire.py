@@ -90,7 +90,8 @@ class BufferedSocket:
         return len(self._read) - self._place
 
     def close(self) -> None:
-        """Close the connection."""
+        """Send what the peer will still take, such as a farewell, and close the connection."""
+        self.flush()
         self.raw.close()
 
     def fileno(self) -> int:
