@@ -13,12 +13,14 @@ PACKAGE = Path(quietmill.__file__).parent
 MAY_IMPORT = {
     "model": set(),
     "instant": set(),
+    "numeral": set(),
+    "logs": set(),
     "settings": {"model", "instant"},
     "charts": {"model"},
-    "intake": {"model", "instant", "settings"},
+    "intake": {"model", "instant", "numeral", "settings"},
     "signals": {"model", "instant", "settings"},
     "outlets": {"model", "instant", "settings"},
-    "study": {"model", "instant", "settings", "charts", "signals"},
+    "study": {"model", "instant", "numeral", "settings", "charts", "signals"},
     "demo": {"model", "instant", "settings"},
 }
 CHARTS_MAY_USE = {"numpy", "numba", "quietmill"}

@@ -48,6 +48,16 @@ def read_settings(config: Path, overrides: tuple[str, ...] = ()) -> Settings:
         sys.exit(2)
 
 
+def print_wide(what: Any) -> None:
+    """Print tables to fit the terminal; where there is none, wide enough that nothing is folded."""
+    from rich.console import Console
+
+    console = Console(highlight=False)
+    if not console.is_terminal:
+        console.width = PIPED_WIDTH
+    console.print(what)
+
+
 @click.group(context_settings={"max_content_width": RIGHT_WIDTH, "help_option_names": ["-h", "--help"]})
 @click.version_option(__version__, prog_name="quietmill", message="%(prog)s %(version)s")
 def main() -> None:
@@ -89,15 +99,9 @@ def check(config: Path) -> None:
     \b
     Example:   quietmill check config/tileworks.yaml
     """
-    from rich.console import Console
-
     from quietmill.settings.describe import describe
 
-    settings = read_settings(config)
-    console = Console(highlight=False)
-    if not console.is_terminal:
-        console.width = PIPED_WIDTH
-    console.print(describe(settings))
+    print_wide(describe(read_settings(config)))
 
 
 @main.command()
@@ -125,16 +129,38 @@ def replay(
     Example:   quietmill replay plant.yaml march.csv --signals march.jsonl
                quietmill replay plant.yaml march.csv --set press1.force.cusum.h=6
     """
-    raise NotImplementedError
+    from quietmill.study.columns import DataError
+    from quietmill.study.progress import progress_over
+    from quietmill.study.replay import replay as replay_history
+
+    settings = read_settings(config, overrides)
+    try:
+        with progress_over(data) as progress:
+            replayed = replay_history(settings, data, points=points, signals=signals, wide=wide, progress=progress)
+    except DataError as error:
+        click.echo(str(error), err=True)
+        sys.exit(1)
+    print_wide(replayed.report())
+    if strict and replayed.refused:
+        sys.exit(1)
 
 
 @main.command()
 @click.option("--for", "duration", type=Seconds(), metavar="60s", help="How long; without it until Ctrl-C.")
+@click.option(
+    "--pace",
+    type=click.FloatRange(0.1, 1000),
+    default=5.0,
+    show_default=True,
+    help="Points a second, of each characteristic.",
+)
 @click.option("--seed", type=int, default=1, show_default=True, help="The same seed gives the same plant and faults.")
-def demo(duration: float | None, seed: int) -> None:
+def demo(duration: float | None, pace: float, seed: int) -> None:
     """Watch a simulated tile works: a broker, a plant with planted faults, and the service.
 
     \b
     Example:   quietmill demo --for 60s
     """
-    raise NotImplementedError
+    from quietmill.demo.run import run_demo
+
+    sys.exit(run_demo(duration, pace, seed))

@@ -7,6 +7,8 @@
 | brings a time: equal, in another message with the same fingerprint | repeated |
 | brings a time: older | late, unless the sender's clock was set back |
 | anything else, or neither counter nor time | accepted |
+
+Where a counter is expected and missing, as in data collected without it, the time decides.
 """
 
 from typing import Final
@@ -51,7 +53,7 @@ def arrive(row: Record, state: Record, reading: Record) -> int:
     """Return the outcome of a reading (an `Outcome`, or ACCEPTED + SET_BACK), and remember it when accepted."""
     outcome = ACCEPTED
     if state.accepted > 0:
-        if row.sequenced:
+        if row.sequenced and min(reading.sequence, state.last_sequence) > NO_TIME:
             fall = state.last_sequence - reading.sequence
             if fall == 0 and reading.message != state.last_message:
                 return REPEATED

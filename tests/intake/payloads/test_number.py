@@ -2,7 +2,8 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from quietmill.intake.payloads.number import NumberReader, number_text
+from quietmill.intake.payloads.number import NumberReader
+from quietmill.numeral import number_text
 from quietmill.model import NO_TIME, Outcome
 
 

@@ -15,9 +15,9 @@ import msgspec
 
 from quietmill.instant import from_float, from_number, parse_time
 from quietmill.intake.payloads.format import Refusal, Sample
-from quietmill.intake.payloads.number import number_text
 from quietmill.intake.pointer import MISSING, Pointer
 from quietmill.model import NO_TIME, Outcome
+from quietmill.numeral import number_text
 from quietmill.settings import Payload
 
 __all__ = ["MAX_DEPTH", "JsonReader"]

@@ -1,27 +1,16 @@
 """Payloads that are one number, as text: `12.5`."""
 
-import re
 from collections.abc import Sequence
 from typing import Final
 
 from quietmill.intake.payloads.format import Refusal, Sample
 from quietmill.model import NO_TIME, Outcome
+from quietmill.numeral import number_text
 
-__all__ = ["NumberReader", "number_text"]
+__all__ = ["NumberReader"]
 
-_NUMBER: Final = re.compile(r"[ \t\r\n]*(-?(?:0|[1-9][0-9]*)(?:\.[0-9]+)?(?:[eE][+-]?[0-9]+)?)[ \t\r\n]*")
 _NO_TEXT: Final = Refusal(Outcome.NOT_JSON, "a number as UTF-8 text")
 _NO_NUMBER: Final = Refusal(Outcome.NOT_A_NUMBER, "a number such as 12.5 and nothing else")
-
-
-def number_text(text: str) -> str | None:
-    """Return the number in a text without the white space around it, or None if by JSON's grammar it is none.
-
-    >>> number_text(" -1.5e3 "), number_text("1_000")
-    ('-1.5e3', None)
-    """
-    match = _NUMBER.fullmatch(text)
-    return match and match[1]
 
 
 class NumberReader:

@@ -1,0 +1,1 @@
+"""History: what would have been said, by the engine that judges live readings."""
