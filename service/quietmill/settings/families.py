@@ -5,6 +5,8 @@ from collections.abc import Iterator, Mapping
 from itertools import product
 from typing import Any, Final
 
+from quietmill.settings.problems import shown
+
 __all__ = ["FamilyError", "members"]
 
 BRACES: Final = re.compile(r"\{\{|\}\}|\{([^{}]*)\}|[{}]")
@@ -31,7 +33,9 @@ def filled(value: Any, names: Mapping[str, str], key: str) -> Any:
             if found in {"{{", "}}"}:
                 return found[0]
             if found in {"{", "}"}:
-                raise FamilyError(key, f"a single brace stands in {value!r}; write {found * 2} for the brace itself")
+                raise FamilyError(
+                    key, f"a single brace stands in {shown(value)}; write {found * 2} for the brace itself"
+                )
             name = match.group(1)
             if name not in names:
                 raise FamilyError(key, f"{found} is not in each; it names {', '.join(names)}")
@@ -48,13 +52,19 @@ def filled(value: Any, names: Mapping[str, str], key: str) -> Any:
 def texts_of(name: str, values: Any) -> list[str]:
     """Return the texts that one name of `each` stands for."""
     if not NAME.fullmatch(name):
-        raise FamilyError("each", f"{name!r} is no name; use letters, digits and _")
+        raise FamilyError("each", f"{shown(name)} is no name; use letters, digits and _")
     if not isinstance(values, list) or not values:
         raise FamilyError("each", f"{name} needs a list of values, such as [1, 2, 3]")
     for value in values:
         if isinstance(value, bool) or not isinstance(value, (str, int)):
-            raise FamilyError("each", f"{name} takes words and whole numbers, has {value!r}")
-    return [str(value) for value in values]
+            raise FamilyError("each", f"{name} takes words and whole numbers, has {shown(value)}")
+    texts = [str(value) for value in values]
+    seen: set[str] = set()
+    for text in texts:
+        if text in seen:
+            raise FamilyError("each", f"{name} has {shown(text)} twice")
+        seen.add(text)
+    return texts
 
 
 def members(entry: Mapping[str, Any]) -> Iterator[dict[str, Any]]:
