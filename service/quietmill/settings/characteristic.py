@@ -104,11 +104,13 @@ class Baseline(Form):
         if not {"lower", "upper"} & set(value):
             return value
         if set(value) != {"lower", "upper"}:
-            raise ValueError(f"takes centre and sigma, or lower and upper, has {' and '.join(map(shown, value))}")
+            raise ValueError(f"takes centre and sigma, or lower and upper; has {', '.join(map(shown, value))}")
         lower, upper = value["lower"], value["upper"]
         if any(isinstance(side, bool) or not isinstance(side, (int, float)) for side in (lower, upper)):
             raise ValueError(f"lower and upper must be numbers, are {shown(lower)} and {shown(upper)}")
-        if not -1e150 <= lower < upper <= 1e150:
+        if not all(-1e150 <= side <= 1e150 for side in (lower, upper)):
+            raise ValueError(f"lower and upper must be finite numbers, are {shown(lower)} and {shown(upper)}")
+        if not lower < upper:
             raise ValueError(f"lower must be below upper, are {shown(lower)} and {shown(upper)}")
         return {"centre": (float(lower) + upper) / 2, "sigma": (float(upper) - lower) / 6}
 
@@ -162,7 +164,7 @@ class Specification(Form):
         if self.lower is None and self.upper is None:
             raise ValueError("needs lower, upper or both")
         if self.lower is not None and self.upper is not None and self.lower >= self.upper:
-            raise ValueError(f"lower must be below upper, is {self.lower:g} and {self.upper:g}")
+            raise ValueError(f"lower must be below upper, are {self.lower:g} and {self.upper:g}")
         return self
 
 
@@ -216,7 +218,7 @@ class Characteristic(Form):
     @model_validator(mode="after")
     def consistent(self) -> Self:
         """Something must be able to signal."""
-        if self.rules == {} and self.ewma is None and self.cusum is None:
+        if self.rules == () and self.ewma is None and self.cusum is None:
             raise ValueError("rules: [] needs ewma or cusum beside it, else nothing could ever signal")
         return self
 
@@ -232,7 +234,7 @@ class Characteristic(Form):
             centre=self.baseline.centre,
             sigma=self.baseline.sigma,
             kind=self.kind,
-            rules=self.rules or {},
+            rules=dict(self.rules or ()),
             ewma=Ewma(self.ewma.lam, self.ewma.width, self.ewma.limits == "exact") if self.ewma else None,
             cusum=cusum,
             side=self.side,

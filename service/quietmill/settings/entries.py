@@ -5,7 +5,7 @@ from dataclasses import dataclass, field
 from typing import Any, Final
 
 from quietmill.settings.characteristic import Characteristic
-from quietmill.settings.families import FamilyError, members
+from quietmill.settings.families import faults, members, stand_in
 from quietmill.settings.problems import Path, nearest, shown
 from quietmill.settings.source import Source
 from quietmill.settings.wording import keys_of
@@ -100,8 +100,8 @@ def entries_of(source: Source, defaults: Mapping[str, Any]) -> Iterator[Entry]:
             own = {key: value for key, value in entry.items() if key != "each"}
             yield Entry(path, own, merged(defaults, own))
         else:
-            try:
-                for own in members(entry):
-                    yield Entry(path, own, merged(defaults, own))
-            except FamilyError as error:
-                source.report((*path, error.key), str(error))
+            found = list(faults(entry))
+            for inner, message in found:
+                source.report((*path, *inner), message)
+            for own in [stand_in(entry)] if found else members(entry):
+                yield Entry(path, own, merged(defaults, own))

@@ -39,7 +39,7 @@ class Checking:
     def part(self, name: str, model: type[Part], given: Any) -> Part | None:
         """Return a checked part of the settings, or None where it was refused."""
         if not isinstance(given, dict):
-            self.refuse((name,), f"must hold keys and values, is {shown(given)}")
+            self.refuse((name,), f"must hold keys and values, indented below it, is {shown(given)}")
             return None
         try:
             return model.model_validate(given)

@@ -4,7 +4,7 @@ import re
 import unicodedata
 from typing import Annotated, Any, Final
 
-from pydantic import BeforeValidator, Field, PlainValidator
+from pydantic import AfterValidator, BeforeValidator, Field, PlainValidator
 
 from quietmill.model import COUNTS, NELSON, Rule
 from quietmill.settings.problems import nearest, shown
@@ -127,20 +127,22 @@ def rule_of(item: Any) -> tuple[Rule, float]:
     return rule, number
 
 
-def rules(value: Any) -> dict[Rule, float]:
-    """Return the rules of a set's name or a list."""
+def rules_of(value: Any) -> Any:
+    """Return the items of a list of rules, or of the set that a name stands for."""
     if isinstance(value, str):
         if value not in SETS:
-            raise ValueError(f"there is no set of rules {shown(value)}{nearest(value, SETS)}; or write a list of rules")
-        return dict(SETS[value])
-    if not isinstance(value, list):
+            raise ValueError(f"there is no set of rules {shown(value)}{nearest(value, SETS)}")
+        return tuple({rule.label: number} if rule in COUNTS else rule.label for rule, number in SETS[value].items())
+    if not isinstance(value, (list, tuple)):
         raise ValueError(f"must be nelson, western_electric or a list of rules, is {shown(value)}")
-    chosen: dict[Rule, float] = {}
-    for item in value:
-        rule, number = rule_of(item)
-        if rule in chosen:
+    return tuple(value)
+
+
+def each_once(chosen: tuple[tuple[Rule, float], ...]) -> tuple[tuple[Rule, float], ...]:
+    """Refuse a rule that stands twice."""
+    for place, (rule, _) in enumerate(chosen):
+        if rule in dict(chosen[:place]):
             raise ValueError(f"{rule.label} stands twice")
-        chosen[rule] = number
     return chosen
 
 
@@ -158,6 +160,11 @@ Text = Annotated[str, BeforeValidator(text)]
 Identifier = Annotated[str, PlainValidator(identifier)]
 Topic = Annotated[str, PlainValidator(topic)]
 Pointer = Annotated[str, PlainValidator(pointer)]
-Rules = Annotated[dict[Rule, float], PlainValidator(rules)]
+Rules = Annotated[
+    tuple[Annotated[tuple[Rule, float], PlainValidator(rule_of)], ...],
+    BeforeValidator(rules_of),
+    AfterValidator(each_once),
+]
+"""Rules with their numbers, 0 for those without one."""
 NotYet = Annotated[None, PlainValidator(not_yet)]
 """A key that is known but refused, rather than accepted and ignored."""
