@@ -7,16 +7,25 @@ from typing import Annotated, Any, Literal, Self
 
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, model_validator
 
-from quietmill.model import Cusum, Detector, Ewma, Rule
-from quietmill.settings.problems import nearest
-from quietmill.settings.values import Duration, Identifier, NotYet, Pointer, Rules, Text, Topic
+from quietmill.model import Cusum, Detector, Ewma
+from quietmill.settings.problems import nearest, shown
+from quietmill.settings.values import Duration, Identifier, NotYet, Number, Pointer, Rules, Text, Topic
 
-__all__ = ["Baseline", "Characteristic", "Form", "Payload", "Specification"]
+__all__ = ["Baseline", "Characteristic", "Form", "Payload", "Specification", "with_default_detector"]
 
 KINDS = ("individuals", "mean_range", "mean_s", "p", "np", "c", "u", "time_between", "count_between")
 MAX_LABELS = 16
-DEFAULT_RULES = {Rule.BEYOND_LIMITS: 4.0}
-DEFAULT_CUSUM = Cusum(k=0.5, h=8, ceiling=2)
+MAX_LABEL = 64
+DETECTOR_KEYS = ("rules", "ewma", "cusum")
+TOO_FINE = 2.0**-50
+"""Beside a centre of 1, numbers this near can hardly be told apart."""
+
+
+def with_default_detector(keys: dict[str, Any]) -> dict[str, Any]:
+    """Return a characteristic's keys; one that names no detector gets that which is made for streams."""
+    if any(keys.get(key) is not None for key in DETECTOR_KEYS):
+        return keys
+    return {**keys, "rules": [{"beyond_limits": 4}], "cusum": {"k": 0.5, "h": 8, "ceiling": 2}}
 
 
 class Form(BaseModel):
@@ -29,11 +38,13 @@ def supported(*values: str, later: tuple[str, ...]) -> BeforeValidator:
     """Accept one of `values`; refuse what a later version brings as not supported yet, the rest with the nearest."""
 
     def choose(value: Any) -> str:
+        if not isinstance(value, str):
+            raise ValueError(f"must be {' or '.join(values)}, is {shown(value)}")
         if value in later:
             raise ValueError(f"{value} is not supported yet; supported is {', '.join(values)}")
         if value not in values:
-            raise ValueError(f"{value!r} is unknown{nearest(str(value), values)}")
-        return str(value)
+            raise ValueError(f"{shown(value)} is unknown{nearest(value, values)}")
+        return value
 
     return BeforeValidator(choose)
 
@@ -76,28 +87,39 @@ class Payload(Form):
 class Baseline(Form):
     """Centre and short-term sigma of single readings, given as such or as their 3-sigma limits."""
 
-    centre: float
-    sigma: Annotated[float, Field(gt=0)]
+    centre: Number
+    sigma: Annotated[Number, Field(gt=0)]
 
     @model_validator(mode="before")
     @classmethod
     def resolved(cls, value: Any) -> Any:
         """Turn lower and upper into centre and sigma; refuse what a later version brings."""
+        if isinstance(value, cls):
+            return value
         if not isinstance(value, dict):
-            raise ValueError(f"must be {{centre, sigma}} or {{lower, upper}}, is {value!r}")
+            raise ValueError(f"must be {{centre, sigma}} or {{lower, upper}}, is {shown(value)}")
         for key in ("file", "learn", "sigma_z", "ar1"):
             if key in value:
                 raise ValueError(f"{key} is not supported yet; write {{centre, sigma}} or {{lower, upper}}")
         if not {"lower", "upper"} & set(value):
             return value
         if set(value) != {"lower", "upper"}:
-            raise ValueError("takes {centre, sigma} or {lower, upper}, not a mixture")
+            raise ValueError(f"takes centre and sigma, or lower and upper; has {', '.join(map(shown, value))}")
         lower, upper = value["lower"], value["upper"]
         if any(isinstance(side, bool) or not isinstance(side, (int, float)) for side in (lower, upper)):
-            raise ValueError(f"lower and upper must be numbers, are {lower!r} and {upper!r}")
+            raise ValueError(f"lower and upper must be numbers, are {shown(lower)} and {shown(upper)}")
+        if not all(-1e150 <= side <= 1e150 for side in (lower, upper)):
+            raise ValueError(f"lower and upper must be finite numbers, are {shown(lower)} and {shown(upper)}")
         if not lower < upper:
-            raise ValueError(f"lower must be below upper, is {lower} and {upper}")
-        return {"centre": (lower + upper) / 2, "sigma": (upper - lower) / 6}
+            raise ValueError(f"lower must be below upper, are {shown(lower)} and {shown(upper)}")
+        return {"centre": (float(lower) + upper) / 2, "sigma": (float(upper) - lower) / 6}
+
+    @model_validator(mode="after")
+    def consistent(self) -> Self:
+        """Refuse a sigma that rounding alone would exceed."""
+        if self.sigma <= abs(self.centre) * TOO_FINE:
+            raise ValueError(f"sigma {self.sigma:g} is too small to be told apart beside a centre of {self.centre:g}")
+        return self
 
     @cached_property
     def version(self) -> str:
@@ -133,8 +155,8 @@ class CusumForm(Form):
 class Specification(Form):
     """What the customer was promised, judged on readings; never a control limit."""
 
-    lower: float | None = None
-    upper: float | None = None
+    lower: Number | None = None
+    upper: Number | None = None
 
     @model_validator(mode="after")
     def consistent(self) -> Self:
@@ -142,13 +164,19 @@ class Specification(Form):
         if self.lower is None and self.upper is None:
             raise ValueError("needs lower, upper or both")
         if self.lower is not None and self.upper is not None and self.lower >= self.upper:
-            raise ValueError(f"lower must be below upper, is {self.lower:g} and {self.upper:g}")
+            raise ValueError(f"lower must be below upper, are {self.lower:g} and {self.upper:g}")
         return self
 
 
 def labels_of(value: Any) -> Any:
     if isinstance(value, dict) and len(value) > MAX_LABELS:
         raise ValueError(f"may be {MAX_LABELS} at most, are {len(value)}")
+    return value
+
+
+def label_of(value: Any) -> Any:
+    if not isinstance(value, str) or not value.isprintable() or not 1 <= len(value) <= MAX_LABEL:
+        raise ValueError(f"a label's name must be 1 to {MAX_LABEL} printable characters, is {shown(value)}")
     return value
 
 
@@ -170,7 +198,9 @@ class Characteristic(Form):
     favourable: Annotated[Literal["high", "low", "none"], supported("high", "low", "none", later=())] = "none"
     specification: Specification | None = None
     reaction: Text | None = None
-    labels: Annotated[dict[str, Text], BeforeValidator(labels_of)] = Field(default_factory=dict[str, str])
+    labels: Annotated[dict[Annotated[str, BeforeValidator(label_of)], Text], BeforeValidator(labels_of)] = Field(
+        default_factory=dict[str, str]
+    )
     limits: Annotated[Literal["sigma"], supported("sigma", later=("probability",))] = "sigma"
     transform: Annotated[Literal["none"], supported("none", later=("log", "square_root"))] = "none"
     quiet_points: Annotated[int, Field(ge=1, le=1_000_000)] = 8
@@ -179,19 +209,23 @@ class Characteristic(Form):
     retained: Annotated[Literal["skip", "accept"], supported("skip", "accept", later=())] = "skip"
     points_per_day: NotYet = None
 
+    @model_validator(mode="before")
+    @classmethod
+    def complete(cls, value: Any) -> Any:
+        """Fill in the default detector."""
+        return with_default_detector(value) if isinstance(value, dict) else value
+
     @model_validator(mode="after")
     def consistent(self) -> Self:
         """Something must be able to signal."""
-        if self.rules == {} and self.ewma is None and self.cusum is None:
+        if self.rules == () and self.ewma is None and self.cusum is None:
             raise ValueError("rules: [] needs ewma or cusum beside it, else nothing could ever signal")
         return self
 
     @cached_property
     def detector(self) -> Detector:
         """What the bank judges with."""
-        rules, cusum = self.rules, None
-        if rules is None and self.ewma is None and self.cusum is None:
-            rules, cusum = DEFAULT_RULES, DEFAULT_CUSUM
+        cusum = None
         if self.cusum is not None:
             ceiling = float("inf") if self.cusum.ceiling is None else self.cusum.ceiling
             cusum = Cusum(self.cusum.k, self.cusum.h, self.cusum.head_start, ceiling)
@@ -200,7 +234,7 @@ class Characteristic(Form):
             centre=self.baseline.centre,
             sigma=self.baseline.sigma,
             kind=self.kind,
-            rules=rules or {},
+            rules=dict(self.rules or ()),
             ewma=Ewma(self.ewma.lam, self.ewma.width, self.ewma.limits == "exact") if self.ewma else None,
             cusum=cusum,
             side=self.side,

@@ -1,101 +1,46 @@
 """From a settings file to checked settings, or to everything that is wrong with it."""
 
 import os
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from pathlib import Path as FilePath
-from typing import Any, Final
+from typing import Any, Final, TypeVar
 
 from pydantic import BaseModel, ValidationError
-from pydantic_core import ErrorDetails
 
-from quietmill.settings.characteristic import Baseline, Characteristic, CusumForm, EwmaForm, Payload, Specification
-from quietmill.settings.families import FamilyError, members
-from quietmill.settings.overrides import override
-from quietmill.settings.plant import Broker, Publish, Settings, Web, record_of
-from quietmill.settings.problems import Path, SettingsError, nearest
-from quietmill.settings.source import Source, read_source
+from quietmill.settings.characteristic import Characteristic
+from quietmill.settings.entries import Entry, defaults_of, entries_of
+from quietmill.settings.overrides import OPTION, override
+from quietmill.settings.plant import Broker, Publish, Record, Settings, Web
+from quietmill.settings.problems import Path, Problem, SettingsError, nearest, path_text, shown
+from quietmill.settings.source import Source, read_text
+from quietmill.settings.tree import read_tree
+from quietmill.settings.wording import problems_of
 
 __all__ = ["load"]
 
-PARTS: Final[Mapping[str, type[BaseModel]]] = {"broker": Broker, "web": Web, "publish": Publish}
-INNER: Final[Mapping[str, type[BaseModel]]] = {
-    "payload": Payload,
-    "baseline": Baseline,
-    "ewma": EwmaForm,
-    "cusum": CusumForm,
-    "specification": Specification,
-}
 KEYS: Final = ("broker", "record", "web", "publish", "defaults", "characteristics")
-OWN: Final = frozenset({"id", "topic", "family", "each"})
-"""What no two characteristics share, and defaults therefore cannot give."""
+Part = TypeVar("Part", bound=BaseModel)
 FILES: Final = ("password_file", "ca_file", "certificate_file", "key_file")
 
 
-def keys_of(model: type[BaseModel]) -> list[str]:
-    """Return the keys of a part of the settings as the file writes them."""
-    return [info.alias or name for name, info in model.model_fields.items()]
-
-
-def in_words(error: ErrorDetails, keys: Sequence[str]) -> str:
-    """Say a validation error in plain words; `keys` are those known where it arose."""
-    kind, value, limits = error["type"], error.get("input"), error.get("ctx", {})
-    shown = repr(value) if isinstance(value, (str, int, float, bool)) or value is None else type(value).__name__
-    match kind:
-        case "extra_forbidden":
-            return f"is no key here{nearest(str(error['loc'][-1]), keys)}"
-        case "missing":
-            return "is missing"
-        case "greater_than":
-            return f"must be greater than {limits['gt']:g}, is {shown}"
-        case "greater_than_equal":
-            return f"must be at least {limits['ge']:g}, is {shown}"
-        case "less_than_equal":
-            return f"must be at most {limits['le']:g}, is {shown}"
-        case "finite_number":
-            return f"must be a finite number, is {shown}"
-        case "float_type" | "float_parsing":
-            return f"must be a number, is {shown}"
-        case "int_type" | "int_from_float" | "int_parsing_size":
-            return f"must be a whole number, is {shown}"
-        case "model_type" | "model_attributes_type" | "dict_type":
-            return f"must hold keys and values, is {shown}"
-        case "string_too_short":
-            return "must not be empty"
-        case "value_error":
-            return str(limits["error"])
-        case _:
-            return f"{error['msg'].lower()}, is {shown}"
-
-
-def problems_of(error: ValidationError, model: type[BaseModel]) -> Iterator[tuple[Path, str]]:
-    """Yield where and what, for each thing that a model refused."""
-    for detail in error.errors(include_url=False):
-        path = tuple(step for step in detail["loc"] if not (isinstance(step, str) and step.endswith("]")))
-        inner = INNER.get(str(path[0])) if len(path) > 1 else None
-        yield path, in_words(detail, keys_of(inner or model))
-
-
-class Reading:
-    """One reading of a settings file; what is wrong gathers in its source."""
+class Checking:
+    """The checking of one settings file; what is wrong gathers in its source."""
 
     def __init__(self, source: Source) -> None:
         self.source = source
         self.reported: set[tuple[Path, str]] = set()
 
     def refuse(self, path: Path, message: str) -> None:
-        """Report once; the members of a family share their places."""
+        """Report once: the members of a family share their place, and all characteristics the defaults."""
         if (path, message) not in self.reported:
             self.reported.add((path, message))
             self.source.report(path, message)
 
-    def part(self, name: str) -> Any:
+    def part(self, name: str, model: type[Part], given: Any) -> Part | None:
         """Return a checked part of the settings, or None where it was refused."""
-        model, given = PARTS[name], self.source.tree.get(name, {})
         if not isinstance(given, dict):
-            self.refuse((name,), f"must hold keys and values, is {given!r}")
+            self.refuse((name,), f"must hold keys and values, indented below it, is {shown(given)}")
             return None
-        if name == "broker":
-            given = self.with_files(given)
         try:
             return model.model_validate(given)
         except ValidationError as error:
@@ -103,93 +48,68 @@ class Reading:
                 self.refuse((name, *path), message)
             return None
 
-    def with_files(self, given: Mapping[str, Any]) -> dict[str, Any]:
-        """Return the broker's settings with paths from the settings file's folder, of files that can be read."""
-        broker = dict(given)
+    def broker(self) -> Broker | None:
+        """Return how to reach the broker, with paths from the settings file's folder, of files that can be read."""
+        broker = self.part("broker", Broker, self.source.tree.get("broker", {}))
+        if broker is None:
+            return None
+        files: dict[str, FilePath] = {}
         for key in FILES:
-            if key not in broker:
+            if (named := getattr(broker, key)) is None:
                 continue
-            if not isinstance(broker[key], str) or "\0" in broker[key]:
-                self.refuse(("broker", key), f"must be the path of a file, is {broker[key]!r}")
-                del broker[key]
-                continue
-            path = FilePath(self.source.file).parent / broker[key]
-            if not path.is_file():
-                self.refuse(("broker", key), f"there is no file {path}")
-            elif not os.access(path, os.R_OK):
-                self.refuse(("broker", key), f"{path} cannot be read by this user")
-            broker[key] = path
-        return broker
+            files[key] = path = FilePath(self.source.file).parent / named
+            try:
+                with path.open("rb"):
+                    pass
+            except OSError as error:
+                self.refuse(("broker", key), f"{os.fspath(path)} cannot be read: {(error.strerror or '').lower()}")
+        return broker.model_copy(update=files)
 
-    def defaults(self) -> dict[str, Any]:
-        """Return what holds for every characteristic that does not say otherwise."""
-        given = self.source.tree.get("defaults", {})
-        if not isinstance(given, dict):
-            self.refuse(("defaults",), f"must hold keys and values, is {given!r}")
-            return {}
-        for key in sorted(OWN & set(given)):
-            self.refuse(("defaults", key), "belongs to one characteristic and cannot be a default")
-        known = keys_of(Characteristic)
-        for key in given:
-            if key not in known and key not in OWN:
-                self.refuse(("defaults", key), f"is no key of a characteristic{nearest(key, known)}")
-        return {key: value for key, value in given.items() if key in known and key not in OWN}
-
-    def entries(self) -> Iterator[tuple[Path, dict[str, Any]]]:
-        """Yield every characteristic's entry, families told apart, with its place."""
-        given = self.source.tree.get("characteristics")
-        if not isinstance(given, list) or not given:
-            self.refuse(("characteristics",), "must be a list of at least one characteristic")
-            return
-        for place, entry in enumerate(given):
-            path: Path = ("characteristics", place)
-            if not isinstance(entry, dict):
-                self.refuse(path, f"must hold keys and values, is {entry!r}")
-            elif "family" not in entry:
-                if "each" in entry:
-                    self.refuse((*path, "each"), "belongs to a family; write family instead of id")
-                yield path, {key: value for key, value in entry.items() if key != "each"}
-            else:
-                try:
-                    for member in members(entry):
-                        yield path, member
-                except FamilyError as error:
-                    self.refuse((*path, error.key), str(error))
-
-    def characteristics(self, entries: Sequence[tuple[Path, dict[str, Any]]]) -> list[Characteristic]:
-        """Return all characteristics of the entries that can be read."""
-        defaults = self.defaults()
+    def characteristics(self, entries: Sequence[Entry], defaults: Mapping[str, Any]) -> list[Characteristic]:
+        """Return the characteristics of all entries that are in order."""
         places: dict[str, Path] = {}
         found: list[Characteristic] = []
-        for path, entry in entries:
-            whole = {**{key: value for key, value in defaults.items() if key not in entry}, **entry}
+        for entry in entries:
+            name = entry.keys.get("id")
+            if isinstance(name, str):
+                if name in places:
+                    self.refuse_twice(entry, name, places[name])
+                places.setdefault(name, entry.path)
             try:
-                characteristic = Characteristic.model_validate(whole)
+                found.append(Characteristic.model_validate(entry.keys))
             except ValidationError as error:
-                for inner, message in problems_of(error, Characteristic):
-                    from_defaults = inner and inner[0] in defaults and inner[0] not in entry
-                    self.refuse(("defaults", *inner) if from_defaults else (*path, *inner), message)
-                if isinstance(entry.get("id"), str):
-                    places.setdefault(entry["id"], path)
-                continue
-            if characteristic.id in places:
-                first = self.source.line(places[characteristic.id])
-                key = "family" if "family" in self.source.tree["characteristics"][path[1]] else "id"
-                self.refuse((*path, key), f"{characteristic.id} stands twice, first in line {first}")
-            places.setdefault(characteristic.id, path)
-            found.append(characteristic)
+                for path, message in problems_of(error, Characteristic):
+                    text = entry.overriding(path)
+                    if text is None:
+                        self.refuse(entry.place(path, defaults), message)
+                    else:
+                        self.refuse_override(text, path, message)
         return found
 
-    def within_prefix(self, characteristics: Sequence[Characteristic], publish: Publish) -> None:
+    def refuse_twice(self, entry: Entry, name: str, first: Path) -> None:
+        """Report an id that two characteristics have, or a family whose members are all called alike."""
+        if "family" not in self.source.tree["characteristics"][entry.path[1]]:
+            self.refuse((*entry.path, "id"), f"{name} stands twice, first in line {self.source.line(first)}")
+        elif first == entry.path:
+            self.refuse((*entry.path, "family"), f"several members are called {name}; use every name of each in it")
+        else:
+            message = f"its member {name} stands twice, first in line {self.source.line(first)}"
+            self.refuse((*entry.path, "family"), message)
+
+    def refuse_override(self, text: str, path: Path, message: str) -> None:
+        """Report what an override made wrong."""
+        where = path_text(path)
+        named = where in text.partition("=")[0]
+        problem = Problem(f"{OPTION} {text}", 0, () if named else path, message)
+        if problem not in self.source.problems:
+            self.source.problems.append(problem)
+
+    def outside(self, entries: Sequence[Entry], prefix: str) -> None:
         """Refuse topics on which the service itself speaks."""
-        own = publish.prefix + "/"
-        for characteristic in characteristics:
-            if characteristic.topic.startswith(own):
-                message = (
-                    f"{characteristic.topic} lies under {own}, where quietmill itself publishes; move publish.prefix"
-                )
-                self.refuse(("characteristics",), f"{characteristic.id}: topic {message}")
-                return
+        for entry in entries:
+            if str(entry.keys.get("topic")).startswith(f"{prefix}/"):
+                message = f"lies under {prefix}/, where quietmill itself publishes; choose another publish.prefix"
+                self.refuse(entry.place(("topic",), {}), message)
 
 
 def load(path: FilePath, overrides: Sequence[str] = ()) -> Settings:
@@ -197,24 +117,35 @@ def load(path: FilePath, overrides: Sequence[str] = ()) -> Settings:
 
     Raises `SettingsError` with all that is wrong: file, line, path and remedy.
     """
-    source = read_source(path)
-    reading = Reading(source)
-    for key in source.tree:
+    source = Source(str(path))
+    tree = source.tree = read_tree(read_text(path), source)
+    if not isinstance(tree, dict):
+        message = f"must hold keys such as broker and characteristics, is {shown(tree)}"
+        raise SettingsError([Problem(source.file, source.line(()), (), message)])
+    checking = Checking(source)
+    for key in tree:
         if key not in KEYS:
-            reading.refuse((key,), f"is no key of the settings{nearest(key, KEYS)}")
-    broker, web, publish = reading.part("broker"), reading.part("web"), reading.part("publish")
-    entries = list(reading.entries())
+            checking.refuse((key,), f"is no key of the settings{nearest(key, KEYS)}")
+    broker = checking.broker()
+    web = checking.part("web", Web, tree.get("web", {}))
+    publish = checking.part("publish", Publish, tree.get("publish", {}))
+    record = tree.get("record")
+    if isinstance(record, str):
+        record = {"url": record}
+    kept = checking.part("record", Record, record) if "record" in tree else None
+    defaults = defaults_of(source)
+    entries = list(entries_of(source, defaults))
     source.problems += override(entries, overrides)
-    characteristics = reading.characteristics(entries)
-    reading.within_prefix(characteristics, publish or Publish())
-    record = None
-    if "record" in source.tree:
-        try:
-            record = record_of(source.tree["record"])
-        except ValueError as error:
-            reading.refuse(("record",), str(error))
-    if source.problems:
+    characteristics = checking.characteristics(entries, defaults)
+    if publish is not None:
+        checking.outside(entries, publish.prefix)
+    if source.problems or broker is None or web is None or publish is None:
         raise SettingsError(sorted(source.problems, key=lambda problem: problem.line))
     return Settings(
-        path=path, broker=broker, record=record, web=web, publish=publish, characteristics=tuple(characteristics)
+        path=path,
+        broker=broker,
+        record=kept.url if kept else None,
+        web=web,
+        publish=publish,
+        characteristics=tuple(characteristics),
     )

@@ -1,58 +1,67 @@
 """Settings tried from the command line, such as `press1.force.cusum.h=6`."""
 
-from collections.abc import Sequence
+from collections.abc import Collection, Sequence
 from typing import Any, Final
 
-from ruamel.yaml import YAML
-from ruamel.yaml.error import YAMLError
+from quietmill.settings.characteristic import with_default_detector
+from quietmill.settings.entries import Entry
+from quietmill.settings.problems import Problem, SettingsError, nearest
+from quietmill.settings.source import Source
+from quietmill.settings.tree import read_tree
 
-from quietmill.settings.problems import Path, Problem, SettingsError, nearest
-from quietmill.settings.source import Source, Tree
-
-__all__ = ["override"]
+__all__ = ["OPTION", "override"]
 
 OPTION: Final = "--set"
 
 
-def value_of(text: str) -> Any:
-    """Return what the text of a value stands for in YAML. Raises `ValueError`."""
-    try:
-        node = YAML(typ="safe", pure=True).compose(text)
-        return Tree(Source(OPTION)).build(node, ()) if node is not None else None
-    except (YAMLError, SettingsError, RecursionError) as error:
-        raise ValueError(f"{text!r} is no YAML value: {str(error).splitlines()[0]}") from None
+def owner_of(place: str, ids: Collection[str]) -> str | None:
+    """Return the longest id that, followed by a dot, begins a place.
 
-
-def owner_of(place: str, ids: set[str]) -> str | None:
-    """Return the longest id that, followed by a dot, begins a place."""
+    >>> owner_of("press1.force.cusum.h", {"press1", "press1.force"})
+    'press1.force'
+    """
     steps = place.split(".")
     heads = (".".join(steps[:count]) for count in range(len(steps) - 1, 0, -1))
     return next((head for head in heads if head in ids), None)
 
 
-def put(entry: dict[str, Any], keys: Sequence[str], value: Any) -> None:
-    """Set a value in an entry, leaving what the entry shares with others untouched."""
-    for key in keys[:-1]:
-        inner = entry.get(key)
-        entry[key] = dict(inner) if isinstance(inner, dict) else {}
-        entry = entry[key]
-    entry[keys[-1]] = value
+def put(keys: dict[str, Any], steps: Sequence[str], value: Any) -> None:
+    """Set a value in an entry's keys, leaving what they share with others untouched."""
+    for step in steps[:-1]:
+        inner = keys.get(step)
+        keys[step] = dict(inner) if isinstance(inner, dict) else {}
+        keys = keys[step]
+    keys[steps[-1]] = value
 
 
-def override(entries: Sequence[tuple[Path, dict[str, Any]]], texts: Sequence[str]) -> list[Problem]:
-    """Replace single settings in the entries of characteristics; return what was wrong with the texts."""
-    by_id = {entry["id"]: entry for _, entry in entries if isinstance(entry.get("id"), str)}
+def override(entries: Sequence[Entry], texts: Sequence[str]) -> list[Problem]:
+    """Replace single settings in the entries of characteristics; return what was wrong with the texts.
+
+    A value within the CUSUM of a characteristic that names no detector changes the default one.
+    """
+    by_id = {entry.keys["id"]: entry for entry in entries if isinstance(entry.keys.get("id"), str)}
     problems: list[Problem] = []
     for text in texts:
         place, equals, value = text.partition("=")
-        owner = owner_of(place, set(by_id))
-        if not equals or "." not in place:
-            problems.append(Problem(OPTION, 0, (), f"{text}: write ID.KEY=VALUE, such as press1.force.cusum.h=6"))
+        owner = owner_of(place, by_id)
+        source = Source(f"{OPTION} {text}")
+        if not equals or "." not in place or not all(place.split(".")):
+            source.report((), "write ID.KEY=VALUE, such as press1.force.cusum.h=6")
         elif owner is None:
-            problems.append(Problem(OPTION, 0, (), f"{text}: no characteristic is called so{nearest(place, by_id)}"))
+            source.report((), f"no characteristic is called so{nearest(place, by_id)}")
         else:
+            steps = place[len(owner) + 1 :].split(".")
             try:
-                put(by_id[owner], place[len(owner) + 1 :].split("."), value_of(value))
-            except ValueError as error:
-                problems.append(Problem(OPTION, 0, (), f"{place}: {error}"))
+                tree = read_tree(value, source)
+            except SettingsError as error:
+                problems += [Problem(source.file, 0, (), problem.message) for problem in error.problems]
+                continue
+            entry = by_id[owner]
+            if steps[0] == "id":
+                source.report((), "the id itself cannot be set")
+            elif steps[0] == "cusum" and len(steps) > 1:
+                entry.keys = with_default_detector(entry.keys)
+            put(entry.keys, steps, tree)
+            entry.set_by[tuple(steps)] = text
+        problems += source.problems
     return problems

@@ -111,7 +111,7 @@ def syntax_problem(file: str, text: str, error: YAMLError) -> Problem:
 class Tree:
     """Builds the plain tree of a source from the events of its YAML."""
 
-    def __init__(self, source: Source, events: Iterator[Event]) -> None:
+    def __init__(self, source: Source, events: Iterator[Any]) -> None:
         self.source = source
         self.events = events
         self.values = 0

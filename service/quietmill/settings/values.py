@@ -1,16 +1,19 @@
 """Single values of the settings file: durations, topics, pointers, rules. Each refuses with a remedy."""
 
 import re
+import unicodedata
 from typing import Annotated, Any, Final
 
-from pydantic import BeforeValidator, PlainValidator
+from pydantic import AfterValidator, BeforeValidator, Field, PlainValidator
 
 from quietmill.model import COUNTS, NELSON, Rule
-from quietmill.settings.problems import nearest
+from quietmill.settings.problems import nearest, shown
 
-__all__ = ["Duration", "Identifier", "NotYet", "Pointer", "Rules", "Text", "Topic", "parse_duration"]
+__all__ = ["Duration", "Identifier", "NotYet", "Number", "Pointer", "Rules", "Size", "Text", "Topic", "in_topics"]
 
 DURATION: Final = re.compile(r"([0-9]+(?:\.[0-9]+)?) *(s|m|h|d)")
+SIZE: Final = re.compile(r"([0-9]+(?:\.[0-9]+)?) *(kB|MB|GB|TB)")
+BYTES: Final = {"kB": 10**3, "MB": 10**6, "GB": 10**9, "TB": 10**12}
 SECONDS: Final = {"s": 1, "m": 60, "h": 3600, "d": 86400}
 IDENTIFIER: Final = re.compile(r"[A-Za-z0-9_-][A-Za-z0-9._-]{0,127}")
 POINTER: Final = re.compile(r"(?:/(?:[^~/]|~[01])*)*")
@@ -26,35 +29,57 @@ def parse_duration(value: Any) -> int:
     """
     match = DURATION.fullmatch(value) if isinstance(value, str) else None
     if match is None:
-        raise ValueError(f"must be a number and s, m, h or d, such as 60s, is {value!r}")
+        raise ValueError(f"must be a number and s, m, h or d, such as 60s, is {shown(value)}")
     seconds = float(match.group(1)) * SECONDS[match.group(2)]
-    if not 0 < seconds <= LONGEST:
-        raise ValueError(f"must be longer than 0 and at most 36500d, is {value}")
-    return round(seconds * 1_000_000)
+    microseconds = round(seconds * 1_000_000) if seconds <= LONGEST else 0
+    if microseconds < 1:
+        raise ValueError(f"must be longer than 0 and at most 36500d, is {shown(value)}")
+    return microseconds
+
+
+def parse_size(value: Any) -> int:
+    """Return a size on disk in bytes.
+
+    >>> parse_size("10GB")
+    10000000000
+    """
+    match = SIZE.fullmatch(value) if isinstance(value, str) else None
+    if match is None or not float(match.group(1)):
+        raise ValueError(f"must be a number and kB, MB, GB or TB, such as 10GB, is {shown(value)}")
+    return round(float(match.group(1)) * BYTES[match.group(2)])
 
 
 def text(value: Any) -> str:
     if not isinstance(value, str):
-        raise ValueError(f"must be text, is {value!r}; put it in quotes")
-    if "\0" in value:
-        raise ValueError("must not hold a NUL character")
+        remedy = "; put it in quotes" if isinstance(value, (bool, int, float)) else ""
+        raise ValueError(f"must be text, is {shown(value)}{remedy}")
+    if "\0" in value or any("\ud800" <= character <= "\udfff" for character in value):
+        raise ValueError(f"must not hold NUL or half a surrogate pair, is {shown(value)}")
     return value
 
 
 def identifier(value: Any) -> str:
     if not isinstance(value, str) or not IDENTIFIER.fullmatch(value):
-        raise ValueError(f"must be 1 to 128 of A-Z a-z 0-9 . _ - and not begin with a dot, is {value!r}")
+        raise ValueError(f"must be 1 to 128 of A-Z a-z 0-9 . _ - and not begin with a dot, is {shown(value)}")
     return value
 
 
-def topic(value: Any) -> str:
+def in_topics(value: Any) -> str:
+    """Return text that an exact topic may hold; brokers hang up on one that holds anything else."""
     name = text(value)
     if not name:
         raise ValueError("must not be empty")
     if "+" in name or "#" in name:
-        raise ValueError(f"must be an exact topic without + and #, is {name!r}; a family names many topics")
+        raise ValueError(f"must be exact, without + and #, is {shown(name)}; a family names many topics")
+    if any(unicodedata.category(character) == "Cc" for character in name):
+        raise ValueError(f"must not hold control characters, is {shown(name)}")
     if name.startswith("$"):
-        raise ValueError(f"must not begin with $, which is the broker's own, is {name!r}")
+        raise ValueError(f"must not begin with $, which is the broker's own, is {shown(name)}")
+    return name
+
+
+def topic(value: Any) -> str:
+    name = in_topics(value)
     if len(name.encode()) > MAX_TOPIC_BYTES:
         raise ValueError("is longer than MQTT allows (65,535 bytes)")
     return name
@@ -63,7 +88,7 @@ def topic(value: Any) -> str:
 def pointer(value: Any) -> str:
     if not isinstance(value, str) or not POINTER.fullmatch(value):
         remedy = f"; write '/{value}'" if isinstance(value, str) and POINTER.fullmatch("/" + value) else ""
-        raise ValueError(f"must be a JSON Pointer (RFC 6901) such as /force or /data/0/v, is {value!r}{remedy}")
+        raise ValueError(f"must be a JSON Pointer (RFC 6901) such as /force or /data/0/v, is {shown(value)}{remedy}")
     return value
 
 
@@ -80,13 +105,13 @@ def rule_of(item: Any) -> tuple[Rule, float]:
     if isinstance(item, dict) and len(item) == 1:
         name, number = next(iter(item.items()))
     if not isinstance(name, str):
-        raise ValueError(f"each must be a rule's name or {{name: number}}, is {item!r}")
+        raise ValueError(f"each must be a rule's name or {{name: number}}, is {shown(item)}")
     if name in SETS:
         raise ValueError(f"{name} is a whole set; write rules: {name}")
     if name not in NAMES:
         if name in {"ewma", "cusum", "spread"}:
             raise ValueError(f"{name} is no entry of rules but a key of its own")
-        raise ValueError(f"there is no rule {name!r}{nearest(name, NAMES)}")
+        raise ValueError(f"there is no rule {shown(name)}{nearest(name, NAMES)}")
     rule = NAMES[name]
     if rule not in COUNTS:
         if number is not None:
@@ -98,37 +123,48 @@ def rule_of(item: Any) -> tuple[Rule, float]:
     fits = isinstance(number, (int, float)) and not isinstance(number, bool) and least <= number <= most
     if not fits or (whole and number != int(number)):
         kind = "a whole number" if whole else "a number"
-        raise ValueError(f"{name} takes {kind} from {least:g} to {most:g}, has {number!r}")
+        raise ValueError(f"{name} takes {kind} from {least:g} to {most:g}, has {shown(number)}")
     return rule, number
 
 
-def rules(value: Any) -> dict[Rule, float]:
-    """Return the rules of a set's name or a list."""
+def rules_of(value: Any) -> Any:
+    """Return the items of a list of rules, or of the set that a name stands for."""
     if isinstance(value, str):
         if value not in SETS:
-            raise ValueError(f"there is no set of rules {value!r}{nearest(value, SETS)}; or write a list of rules")
-        return dict(SETS[value])
-    if not isinstance(value, list):
-        raise ValueError(f"must be nelson, western_electric or a list of rules, is {value!r}")
-    chosen: dict[Rule, float] = {}
-    for item in value:
-        rule, number = rule_of(item)
-        if rule in chosen:
+            raise ValueError(f"there is no set of rules {shown(value)}{nearest(value, SETS)}")
+        return tuple({rule.label: number} if rule in COUNTS else rule.label for rule, number in SETS[value].items())
+    if not isinstance(value, (list, tuple)):
+        raise ValueError(f"must be nelson, western_electric or a list of rules, is {shown(value)}")
+    return tuple(value)
+
+
+def each_once(chosen: tuple[tuple[Rule, float], ...]) -> tuple[tuple[Rule, float], ...]:
+    """Refuse a rule that stands twice."""
+    for place, (rule, _) in enumerate(chosen):
+        if rule in dict(chosen[:place]):
             raise ValueError(f"{rule.label} stands twice")
-        chosen[rule] = number
     return chosen
 
 
 def not_yet(_value: Any) -> None:
-    raise ValueError("is not supported yet")
+    raise ValueError("is not supported yet; leave it out")
 
 
 Duration = Annotated[int, PlainValidator(parse_duration)]
 """Microseconds."""
+Size = Annotated[int, PlainValidator(parse_size)]
+"""Bytes."""
+Number = Annotated[float, Field(ge=-1e150, le=1e150)]
+"""A number whose square is still finite."""
 Text = Annotated[str, BeforeValidator(text)]
 Identifier = Annotated[str, PlainValidator(identifier)]
 Topic = Annotated[str, PlainValidator(topic)]
 Pointer = Annotated[str, PlainValidator(pointer)]
-Rules = Annotated[dict[Rule, float], PlainValidator(rules)]
+Rules = Annotated[
+    tuple[Annotated[tuple[Rule, float], PlainValidator(rule_of)], ...],
+    BeforeValidator(rules_of),
+    AfterValidator(each_once),
+]
+"""Rules with their numbers, 0 for those without one."""
 NotYet = Annotated[None, PlainValidator(not_yet)]
 """A key that is known but refused, rather than accepted and ignored."""
