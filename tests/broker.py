@@ -40,7 +40,11 @@ class Mosquitto:
         self.folder = folder
         store = folder / "store"
         store.mkdir(parents=True, exist_ok=True)
-        access = () if any("password_file" in line or "allow_anonymous" in line for line in lines) else ("allow_anonymous true",)
+        access = (
+            ()
+            if any("password_file" in line or "allow_anonymous" in line for line in lines)
+            else ("allow_anonymous true",)
+        )
         self.config = folder / "mosquitto.conf"
         self.config.write_text(
             "\n".join(

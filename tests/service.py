@@ -20,7 +20,9 @@ class Service:
         self.process: subprocess.Popen[bytes] | None = None
 
     @classmethod
-    def of(cls, folder: Path, broker_url: str, characteristics: str, broker: str = "", name: str = "quietmill") -> "Service":
+    def of(
+        cls, folder: Path, broker_url: str, characteristics: str, broker: str = "", name: str = "quietmill"
+    ) -> "Service":
         """Write the settings of a service; `characteristics` and `broker` are YAML in flow style."""
         port = free_port()
         config = folder / f"{name}.yaml"
