@@ -7,6 +7,7 @@ import subprocess
 import time
 from collections.abc import Iterator
 from pathlib import Path
+from typing import Self
 
 import paho.mqtt.client as mqtt
 from paho.mqtt.enums import CallbackAPIVersion
@@ -134,7 +135,7 @@ class Peer:
         self.client.disconnect()
         self.client.loop_stop()
 
-    def __enter__(self) -> "Peer":
+    def __enter__(self) -> Self:
         return self
 
     def __exit__(self, *_: object) -> None:

@@ -7,23 +7,24 @@ from datetime import UTC, datetime, timedelta
 from pathlib import Path
 
 import pytest
-from broker import Mosquitto, Peer, running, wait_for
 from jsonschema import Draft202012Validator
-from service import Service
 
+from broker import Mosquitto, Peer, running, wait_for
 from quietmill.settings import load
 from quietmill.signals.schema import schema
 from quietmill.study.replay import replay
+from service import Service
 
 pytestmark = pytest.mark.broker
 
 CHARACTERISTICS = """[
-  {id: press1.force, topic: tiles/press/1, payload: {value: /force, time: /at}, unit: kN, baseline: {centre: 240, sigma: 2},
-   rules: nelson, ewma: {lambda: 0.1, L: 2.814}, cusum: {k: 0.5, h: 5}, specification: {lower: 235, upper: 246}},
-  {id: press1.thickness, topic: tiles/press/1, payload: {value: /mm, time: /at}, unit: mm, baseline: {lower: 8.46, upper: 8.94},
-   rules: western_electric, spread: signal, favourable: low},
-  {id: kiln1.zone1, topic: tiles/kiln/1, payload: {array: /samples, value: /t, time: /at}, baseline: {centre: 1145, sigma: 3},
-   rules: [same_side, trend], points_kept: 10}]"""
+  {id: press1.force, topic: tiles/press/1, payload: {value: /force, time: /at}, unit: kN,
+   baseline: {centre: 240, sigma: 2}, rules: nelson, ewma: {lambda: 0.1, L: 2.814}, cusum: {k: 0.5, h: 5},
+   specification: {lower: 235, upper: 246}},
+  {id: press1.thickness, topic: tiles/press/1, payload: {value: /mm, time: /at}, unit: mm,
+   baseline: {lower: 8.46, upper: 8.94}, rules: western_electric, spread: signal, favourable: low},
+  {id: kiln1.zone1, topic: tiles/kiln/1, payload: {array: /samples, value: /t, time: /at},
+   baseline: {centre: 1145, sigma: 3}, rules: [same_side, trend], points_kept: 10}]"""
 
 
 def readings(count: int, seed: int = 3) -> list[tuple[str, float, str]]:

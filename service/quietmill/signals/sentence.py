@@ -117,9 +117,9 @@ def rule_joined(
 ) -> str:
     """Return the sentence of rules that joined an open signal, raised at `raised`."""
     meanings = " and ".join(MEANING[rule] for rule in joined)
-    side = "" if direction in {Direction.NONE, Direction.BOTH} else f" to the {direction.label} side"
+    side = "" if direction in {Direction.NONE, Direction.BOTH} else f", {direction.label}"
     return (
-        f"{characteristic} also shows {meanings}{side} ({names(joined)}), "
+        f"{characteristic} also shows {meanings} ({names(joined)}{side}), "
         f"now at {with_unit(value, sigma, unit)}; signal of {moment(raised, time)} goes on"
     )
 
