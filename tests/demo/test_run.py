@@ -36,7 +36,7 @@ def run(*options: str, env: dict[str, str] | None = None) -> subprocess.Complete
 
 @pytest.mark.broker
 def test_a_demo_on_mosquitto_ends_with_a_scorecard() -> None:
-    done = run("--for", "4s", "--pace", "60", env=without_mosquitto(tmp_path))
+    done = run("--for", "4s", "--pace", "60")
     assert done.returncode == 0, done.stderr
     assert "on Mosquitto" in done.stdout
     assert re.search(r"[1-9]\d* of 12 faults that have begun were found", done.stdout)
@@ -45,14 +45,7 @@ def test_a_demo_on_mosquitto_ends_with_a_scorecard() -> None:
 
 
 def test_a_demo_brings_its_own_broker_where_there_is_no_other(tmp_path: Path) -> None:
-    done = subprocess.run(
-        command("--for", "4s", "--pace", "60"),
-        capture_output=True,
-        text=True,
-        timeout=120,
-        env=without_mosquitto(tmp_path),
-        check=False,
-    )
+    done = run("--for", "4s", "--pace", "60", env=without_mosquitto(tmp_path))
     assert done.returncode == 0, done.stderr
     assert "the broker that the demo carries" in done.stdout
     assert re.search(r"[1-9]\d* of 12 faults that have begun were found", done.stdout)
