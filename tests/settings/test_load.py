@@ -2,6 +2,7 @@
 
 import pytest
 from hypothesis import given
+from hypothesis import settings as trying
 from hypothesis import strategies as st
 
 from quietmill.model import Cusum, Rule
@@ -202,6 +203,7 @@ VALUES = st.recursive(
 KEYS = st.sampled_from([key for key in keys_of(Characteristic) if key != "id"] + ["family", "each"])
 
 
+@trying(deadline=None)
 @given(entry=st.dictionaries(KEYS, VALUES, max_size=4), head=st.dictionaries(KEYS, VALUES, max_size=2))
 def test_whatever_values_the_keys_have_nothing_but_a_settings_error_is_raised(
     loaded_once: Loaded, entry: dict[str, str], head: dict[str, str]

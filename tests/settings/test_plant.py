@@ -1,5 +1,7 @@
 """Broker, record, web and publish: their defaults, their bounds, the files they name."""
 
+import re
+import textwrap
 from pathlib import Path
 
 import pytest
@@ -169,6 +171,9 @@ def test_a_plant_without_characteristics_is_refused(refused: Refused, text: str)
 
 
 CONFIG = Path(__file__).parents[2] / "config"
+README = (CONFIG / "README.md").read_text()
+BLOCKS = [textwrap.dedent(block) for block in re.findall(r"(?:^    .*\n)+", README, re.MULTILINE)]
+ENTRIES = [block for block in BLOCKS if re.search(r"^ *- (id|family): ", block, re.MULTILINE)]
 
 
 @pytest.mark.parametrize("path", sorted(CONFIG.glob("*.yaml")), ids=lambda path: path.name)
@@ -179,10 +184,21 @@ def test_the_settings_that_we_ship_are_good(path: Path) -> None:
 
 
 def test_every_key_stands_in_the_readme() -> None:
-    readme = (CONFIG / "README.md").read_text()
     forms = (Broker, Record, Web, Publish, Characteristic, Payload, Baseline, EwmaForm, CusumForm, Specification)
     keys = {key for form in forms for key in keys_of(form)} | set(KEYS)
-    assert {key for key in keys if f"`{key}`" not in readme} == set()
+    assert {key for key in keys if f"`{key}`" not in README} == set()
+
+
+@pytest.mark.parametrize("block", ENTRIES, ids=range(len(ENTRIES)))
+def test_the_readmes_characteristics_are_good(loaded: Loaded, block: str) -> None:
+    settings = loaded(block if block.startswith("characteristics:") else f"characteristics:\n{block}")
+    assert len(settings.characteristics) in {1, 8}
+
+
+def test_the_readmes_default_detector_is_the_default(loaded: Loaded) -> None:
+    (block,) = (block for block in BLOCKS if "ceiling: 2" in block and block.startswith("rules"))
+    explicit = loaded(plant(*block.splitlines())).characteristics[0]
+    assert explicit.detector == loaded(plant()).characteristics[0].detector
 
 
 def test_a_settings_error_says_everything_as_text(tmp_path: Path) -> None:

@@ -5,6 +5,7 @@ from pathlib import Path
 
 import pytest
 from hypothesis import given
+from hypothesis import settings as trying
 from hypothesis import strategies as st
 
 from quietmill.settings import SettingsError, load
@@ -141,6 +142,7 @@ def folder(tmp_path_factory: pytest.TempPathFactory) -> Path:
     return tmp_path_factory.mktemp("settings")
 
 
+@trying(deadline=None)
 @given(content=st.binary(max_size=200))
 def test_arbitrary_bytes_raise_nothing_but_a_settings_error(folder: Path, content: bytes) -> None:
     path = folder / "plant.yaml"
@@ -149,6 +151,7 @@ def test_arbitrary_bytes_raise_nothing_but_a_settings_error(folder: Path, conten
         load(path)
 
 
+@trying(deadline=None)
 @given(st.text(st.sampled_from("ab:-[]{},&*!|>'\"%@#?~ \n\t0.1e\\ud"), max_size=60))
 def test_arbitrary_yaml_raises_nothing_but_a_settings_error(text: str) -> None:
     source = Source("plant.yaml")
