@@ -79,11 +79,7 @@ class Checking:
                 found.append(Characteristic.model_validate(entry.keys))
             except ValidationError as error:
                 for path, message in problems_of(error, Characteristic):
-                    text = entry.overriding(path)
-                    if text is None:
-                        self.refuse(entry.place(path, defaults), message)
-                    else:
-                        self.refuse_override(text, path, message)
+                    self.refuse_in(entry, path, message, defaults)
         return found
 
     def refuse_twice(self, entry: Entry, name: str, first: Path) -> None:
@@ -96,8 +92,12 @@ class Checking:
             message = f"its member {name} stands twice, first in line {self.source.line(first)}"
             self.refuse((*entry.path, "family"), message)
 
-    def refuse_override(self, text: str, path: Path, message: str) -> None:
-        """Report what an override made wrong."""
+    def refuse_in(self, entry: Entry, path: Path, message: str, defaults: Mapping[str, Any]) -> None:
+        """Report what is wrong within an entry where it comes from: there, the defaults, or an override."""
+        text = entry.overriding(path)
+        if text is None:
+            self.refuse(entry.place(path, defaults), message)
+            return
         where = path_text(path)
         named = where in text.partition("=")[0]
         problem = Problem(f"{OPTION} {text}", 0, () if named else path, message)
@@ -109,7 +109,7 @@ class Checking:
         for entry in entries:
             if str(entry.keys.get("topic")).startswith(f"{prefix}/"):
                 message = f"lies under {prefix}/, where quietmill itself publishes; choose another publish.prefix"
-                self.refuse(entry.place(("topic",), {}), message)
+                self.refuse_in(entry, ("topic",), message, {})
 
 
 def load(path: FilePath, overrides: Sequence[str] = ()) -> Settings:

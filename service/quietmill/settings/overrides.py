@@ -45,23 +45,26 @@ def override(entries: Sequence[Entry], texts: Sequence[str]) -> list[Problem]:
         place, equals, value = text.partition("=")
         owner = owner_of(place, by_id)
         source = Source(f"{OPTION} {text}")
-        if not equals or "." not in place or not all(place.split(".")):
+        if not equals or not all(place.split(".")) or (owner is None and (place in by_id or "." not in place)):
             source.report((), "write ID.KEY=VALUE, such as press1.force.cusum.h=6")
         elif owner is None:
             source.report((), f"no characteristic is called so{nearest(place, by_id)}")
+        elif place == f"{owner}.id":
+            source.report((), "the id itself cannot be set")
         else:
-            steps = place[len(owner) + 1 :].split(".")
-            try:
-                tree = read_tree(value, source)
-            except SettingsError as error:
-                problems += [Problem(source.file, 0, (), problem.message) for problem in error.problems]
-                continue
-            entry = by_id[owner]
-            if steps[0] == "id":
-                source.report((), "the id itself cannot be set")
-            elif steps[0] == "cusum" and len(steps) > 1:
-                entry.keys = with_default_detector(entry.keys)
-            put(entry.keys, steps, tree)
-            entry.set_by[tuple(steps)] = text
+            apply(by_id[owner], place[len(owner) + 1 :].split("."), value, source)
         problems += source.problems
     return problems
+
+
+def apply(entry: Entry, steps: Sequence[str], value: str, source: Source) -> None:
+    """Put the value that a text stands for into an entry, or report what is wrong with it."""
+    try:
+        tree = read_tree(value, source)
+    except SettingsError as error:
+        source.problems += [Problem(source.file, 0, (), problem.message) for problem in error.problems]
+        return
+    if steps[0] == "cusum" and len(steps) > 1:
+        entry.keys = with_default_detector(entry.keys)
+    put(entry.keys, steps, tree)
+    entry.set_by[tuple(steps)] = source.file.removeprefix(f"{OPTION} ")

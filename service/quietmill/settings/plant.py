@@ -17,6 +17,7 @@ PORTS = {"mqtt": 1883, "mqtts": 8883, "ws": 80, "wss": 443}
 DAY = 86_400_000_000
 MAX_CLIENT_ID = 128
 MAX_PREFIX_BYTES = 1024
+LISTEN = re.compile(r"[^\s@/?#]+:[0-9]{1,5}")
 SOURCE = re.compile(r"[A-Za-z0-9._~:/?#\[\]@!$&'()*+,;=%-]{1,512}")
 
 
@@ -143,11 +144,13 @@ class Broker(Form):
 
 
 def address_of(value: Any) -> str:
-    example = "127.0.0.1:8088 (host:port)"
-    if not isinstance(value, str) or not re.fullmatch(r".+:[0-9]{1,5}", value) or set(value) & set("@/"):
-        raise ValueError(f"must look like {example}, is {shown(value)}")
-    if not value.endswith(":0"):
-        split_url(f"//{value}", example)
+    try:
+        parts = urlsplit(f"//{value}") if isinstance(value, str) and LISTEN.fullmatch(value) else None
+        good = parts is not None and bool(parts.hostname) and parts.port is not None
+    except ValueError:
+        good = False
+    if not good:
+        raise ValueError(f"must be host:port, such as 127.0.0.1:8088, is {shown(value)}")
     return value
 
 
@@ -170,8 +173,7 @@ class Web(Form):
 def source_of(value: Any) -> str:
     """Return a CloudEvents source, which is a URI reference."""
     if not isinstance(value, str) or not SOURCE.fullmatch(value):
-        remedy = "letters, digits and -._~:/?#[]@!$&'()*+,;=% only, such as plant/line1"
-        raise ValueError(f"must be a URI or part of one: {remedy}; is {shown(value)}")
+        raise ValueError(f"must be a URI or part of one, such as plant/line1, is {shown(value)}")
     return value
 
 

@@ -17,6 +17,7 @@ BYTES: Final = {"kB": 10**3, "MB": 10**6, "GB": 10**9, "TB": 10**12}
 SECONDS: Final = {"s": 1, "m": 60, "h": 3600, "d": 86400}
 IDENTIFIER: Final = re.compile(r"[A-Za-z0-9_-][A-Za-z0-9._-]{0,127}")
 POINTER: Final = re.compile(r"(?:/(?:[^~/]|~[01])*)*")
+WILDCARDS: Final = "+#"
 MAX_TOPIC_BYTES: Final = 65_535
 LONGEST: Final = 36_500 * 86_400
 
@@ -69,8 +70,8 @@ def in_topics(value: Any) -> str:
     name = text(value)
     if not name:
         raise ValueError("must not be empty")
-    if "+" in name or "#" in name:
-        raise ValueError(f"must be exact, without + and #, is {shown(name)}; a family names many topics")
+    if any(sign in name for sign in WILDCARDS):
+        raise ValueError(f"must not hold + or #, is {shown(name)}")
     if any(unicodedata.category(character) == "Cc" for character in name):
         raise ValueError(f"must not hold control characters, is {shown(name)}")
     if name.startswith("$"):
@@ -79,6 +80,8 @@ def in_topics(value: Any) -> str:
 
 
 def topic(value: Any) -> str:
+    if isinstance(value, str) and any(sign in value for sign in WILDCARDS):
+        raise ValueError(f"must not hold + or #, is {shown(value)}; a family names many topics")
     name = in_topics(value)
     if len(name.encode()) > MAX_TOPIC_BYTES:
         raise ValueError("is longer than MQTT allows (65,535 bytes)")
