@@ -78,6 +78,18 @@ class Client(mqtt.Client):
         """Connect, which blocks: TCP, and TLS and websocket where the settings say so."""
         return super()._create_socket()
 
+    def _ssl_wrap_socket(self, tcp_sock: socket.socket) -> ssl.SSLSocket:
+        """Encrypt a connection, or close it."""
+        context = self._ssl_context or ssl.create_default_context()
+        encrypted = context.wrap_socket(tcp_sock, server_hostname=self._host, do_handshake_on_connect=False)
+        try:
+            encrypted.settimeout(self.connect_timeout)
+            encrypted.do_handshake()
+        except BaseException:
+            encrypted.close()
+            raise
+        return encrypted
+
     def _create_socket(self) -> Any:
         """Hand paho the socket that is ready."""
         ready, self.ready = self.ready, None
@@ -121,12 +133,12 @@ class Connection:
         self._since = 0.0
         self._short_lives = 0
         self._closing = False
+        self._client = self._make_client(will)
         self._selector = selectors.DefaultSelector()
         self._wakes, self._waker = socket.socketpair()
         self._wakes.setblocking(False)
         self._waker.setblocking(False)
         self._selector.register(self._wakes, selectors.EVENT_READ)
-        self._client = self._make_client(will)
 
     def _make_client(self, will: Will) -> Client:
         broker, client = self._broker, Client(self._broker)
@@ -286,7 +298,7 @@ class Connection:
 
     def _failed(self, error: BaseException) -> None:
         broker = self._broker
-        self._say(in_words(error, broker.host, broker.port, ANSWER_SECONDS))
+        self._say(in_words(error, broker, ANSWER_SECONDS))
         self._drop()
 
     def _say(self, trouble: str) -> None:

@@ -6,6 +6,8 @@ from typing import Final
 
 from paho.mqtt.reasoncodes import ReasonCode
 
+from quietmill.settings import Broker
+
 __all__ = ["in_words", "refusal_in_words"]
 
 REFUSALS: Final = {
@@ -20,9 +22,9 @@ REFUSALS: Final = {
 }
 
 
-def in_words(error: BaseException, host: str, port: int, seconds: float) -> str:
+def in_words(error: BaseException, broker: Broker, seconds: float) -> str:
     """Say why no connection came about. `seconds` is how long was waited for one."""
-    where = f"{host}:{port}"
+    host, where = broker.host, f"{broker.host}:{broker.port}"
     match error:
         case ConnectionRefusedError():
             return f"nothing listens at {where} (connection refused): is the broker running, is the port right?"
@@ -34,6 +36,8 @@ def in_words(error: BaseException, host: str, port: int, seconds: float) -> str:
         case ssl.SSLError():
             reason = error.reason or str(error)
             return f"no encrypted connection to {where} ({reason}): check the port, and the certificates on both sides"
+        case ConnectionError() if broker.scheme in {"mqtts", "wss"}:
+            return f"no encrypted connection to {where} (it closes at once): does that port speak TLS?"
         case TimeoutError():
             return f"{where} did not answer in {seconds:g} s: is there a firewall between, is it a broker?"
         case OSError():
