@@ -54,8 +54,8 @@ ROUNDING: Final = 2.0**-50
 NOTICES_AT_ONCE: Final = 256
 """The walk pauses when so many notices wait to be taken; results do not depend on it."""
 
-POINTS_ON_A_SHEET: Final = 1024
-"""Points are allocated so many at once: an allocation a reading would cost more than judging it."""
+SHEET_POINTS: Final = 1024
+"""Points are allocated so many at once."""
 
 NO_INDICES: Final = np.empty(0, np.int64)
 NO_NOTICES: Final = np.empty(0, NOTICE)
@@ -206,7 +206,7 @@ class Bank:
         self.rows = attributes(pack(detectors))
         self.state = attributes(fresh_state(self.rows))
         self.pool = attributes(fresh_pool(self.rows))
-        self._sheet = attributes(np.empty(POINTS_ON_A_SHEET, POINT))  # blank; verdicts are cut from it, never reused
+        self._new_sheet(SHEET_POINTS)
         self._notices = attributes(np.zeros(NOTICES_AT_ONCE, NOTICE))
         self._recent = attributes(np.zeros((NOTICES_AT_ONCE, RECENT_POINTS), RECENT))
 
@@ -215,30 +215,52 @@ class Bank:
 
         How a series is cut into batches makes no difference. The rows of `readings` are trusted to exist.
         """
-        count = len(readings)
         if not COMPILED:
             readings = attributes(readings)
-        outcomes = np.empty(count, np.uint8)
-        if count > len(self._sheet):
-            self._sheet = attributes(np.empty(max(count, POINTS_ON_A_SHEET), POINT))
-        points, self._sheet = self._sheet[:count], self._sheet[count:]
-        told: list[NDArray[Any]] = []
-        shown: list[NDArray[Any]] = []
-        place = made = set_back = 0
-        while place < count:
-            place, made, number, found = judge(
+        count = len(readings)
+        begin, end = self._used, self._used + count
+        if end > self._size:
+            self._new_sheet(max(count, SHEET_POINTS))
+            begin, end = 0, count
+        self._used = end
+        outcomes, points = self._outcomes[begin:end], self._points[begin:end]
+        place, made, told, set_back = judge(
+            self.rows, self.state, self.pool, readings, 0, outcomes, points, 0, self._notices, self._recent
+        )
+        if told or set_back or place < count:
+            return self._go_on(readings, outcomes, points, place, made, told, set_back)
+        return Verdicts(outcomes, points if made == count else points[:made], NO_NOTICES, NO_RECENT, NO_INDICES)
+
+    def _go_on(
+        self,
+        readings: NDArray[Any],
+        outcomes: NDArray[np.uint8],
+        points: NDArray[Any],
+        place: int,
+        made: int,
+        told: int,
+        set_back: int,
+    ) -> Verdicts:
+        """Take the notices of a walk that has something to say, and let it go on where it paused."""
+        notices, recent = [self._notices[:told].copy()], [self._recent[:told].copy()]
+        while place < len(readings):
+            place, made, told, found = judge(
                 self.rows, self.state, self.pool, readings, place, outcomes, points, made, self._notices, self._recent
             )
             set_back += found
-            if number:
-                told.append(self._notices[:number].copy())
-                shown.append(self._recent[:number].copy())
+            notices.append(self._notices[:told].copy())
+            recent.append(self._recent[:told].copy())
         clocks = NO_INDICES
         if set_back:
             clocks = np.flatnonzero(outcomes & SET_BACK)
             outcomes &= SET_BACK - 1
-        if made < count:
-            points = points[:made]
-        if not told:
-            return Verdicts(outcomes, points, NO_NOTICES, NO_RECENT, clocks)
-        return Verdicts(outcomes, points, np.concatenate(told), np.concatenate(shown), clocks)
+        return Verdicts(outcomes, points[:made], np.concatenate(notices), np.concatenate(recent), clocks)
+
+    def _new_sheet(self, size: int) -> None:
+        """Take a blank sheet for points and outcomes: verdicts are cut from it, and no part of it is used twice.
+
+        Allocating for each reading alone would cost more than judging it.
+        """
+        self._points = attributes(np.empty(size, POINT))
+        self._outcomes = np.empty(size, np.uint8)
+        self._used, self._size = 0, size

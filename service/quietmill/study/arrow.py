@@ -81,6 +81,6 @@ def read_clean(path: Path, rows_by_id: Mapping[str, int]) -> Generator[CleanColu
                 if columns is None:
                     return False
                 yield columns
-    except (pa.ArrowException, OSError):
+    except (pa.ArrowException, OSError, UnicodeDecodeError):
         return False
     return True

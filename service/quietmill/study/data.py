@@ -174,15 +174,13 @@ class History:
             rows = [self._rows[name] for name in columns.characteristic]
         except KeyError:
             raise _DoubtError from None
+        times, values = _instants(columns.time), _numbers(columns.value)
+        sequences = _whole_numbers(columns.sequence) if columns.sequence else NO_TIME
+        arrivals = _instants(columns.arrival) if columns.arrival else NO_TIME
         readings = self._blank(len(rows))
-        readings["row"] = rows
-        readings["time"] = _instants(columns.time)
-        readings["value"] = _numbers(columns.value) + 0.0  # -0.0 becomes the 0.0 that it equals
+        readings["row"], readings["time"], readings["sequence"], readings["arrival"] = rows, times, sequences, arrivals
+        readings["value"] = values + 0.0  # -0.0 becomes the 0.0 that it equals
         readings["fingerprint"] = readings["value"].view(np.uint64)
-        if columns.sequence:
-            readings["sequence"] = _whole_numbers(columns.sequence)
-        if columns.arrival:
-            readings["arrival"] = _instants(columns.arrival)
         return readings
 
     def _blank(self, count: int) -> Records:
