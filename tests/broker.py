@@ -7,6 +7,7 @@ import subprocess
 import time
 from collections.abc import Iterator
 from pathlib import Path
+from typing import Self
 
 import paho.mqtt.client as mqtt
 from paho.mqtt.enums import CallbackAPIVersion
@@ -40,7 +41,11 @@ class Mosquitto:
         self.folder = folder
         store = folder / "store"
         store.mkdir(parents=True, exist_ok=True)
-        access = () if any("password_file" in line or "allow_anonymous" in line for line in lines) else ("allow_anonymous true",)
+        access = (
+            ()
+            if any("password_file" in line or "allow_anonymous" in line for line in lines)
+            else ("allow_anonymous true",)
+        )
         self.config = folder / "mosquitto.conf"
         self.config.write_text(
             "\n".join(
@@ -130,7 +135,7 @@ class Peer:
         self.client.disconnect()
         self.client.loop_stop()
 
-    def __enter__(self) -> "Peer":
+    def __enter__(self) -> Self:
         return self
 
     def __exit__(self, *_: object) -> None:

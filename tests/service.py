@@ -6,6 +6,7 @@ import sys
 import urllib.error
 import urllib.request
 from pathlib import Path
+from typing import Self
 
 from broker import free_port, wait_for
 
@@ -20,7 +21,9 @@ class Service:
         self.process: subprocess.Popen[bytes] | None = None
 
     @classmethod
-    def of(cls, folder: Path, broker_url: str, characteristics: str, broker: str = "", name: str = "quietmill") -> "Service":
+    def of(
+        cls, folder: Path, broker_url: str, characteristics: str, broker: str = "", name: str = "quietmill"
+    ) -> "Service":
         """Write the settings of a service; `characteristics` and `broker` are YAML in flow style."""
         port = free_port()
         config = folder / f"{name}.yaml"
@@ -31,7 +34,7 @@ class Service:
         )
         return cls(config, port)
 
-    def start(self, ready: bool = True) -> "Service":
+    def start(self, ready: bool = True) -> Self:
         with self.log_file.open("ab") as log:
             command = [sys.executable, "-m", "quietmill", "run", str(self.config)]
             self.process = subprocess.Popen(command, stdout=log, stderr=log)
@@ -79,7 +82,7 @@ class Service:
         self.process.wait(20)
         self.process = None
 
-    def __enter__(self) -> "Service":
+    def __enter__(self) -> Self:
         return self.start()
 
     def __exit__(self, *_: object) -> None:

@@ -13,7 +13,6 @@ __all__ = ["main"]
 
 CONFIG = click.argument("config", type=click.Path(path_type=Path))
 RIGHT_WIDTH = 100
-PIPED_WIDTH = 200
 
 
 class Seconds(click.ParamType):
@@ -48,14 +47,12 @@ def read_settings(config: Path, overrides: tuple[str, ...] = ()) -> Settings:
         sys.exit(2)
 
 
-def print_wide(what: Any) -> None:
-    """Print tables to fit the terminal; where there is none, wide enough that nothing is folded."""
+def show(what: Any) -> None:
+    """Print tables to fit the terminal; where there is none, every line whole."""
     from rich.console import Console
 
     console = Console(highlight=False)
-    if not console.is_terminal:
-        console.width = PIPED_WIDTH
-    console.print(what)
+    console.print(what, soft_wrap=not console.is_terminal)
 
 
 @click.group(context_settings={"max_content_width": RIGHT_WIDTH, "help_option_names": ["-h", "--help"]})
@@ -101,7 +98,7 @@ def check(config: Path) -> None:
     """
     from quietmill.settings.describe import describe
 
-    print_wide(describe(read_settings(config)))
+    show(describe(read_settings(config)))
 
 
 @main.command()
@@ -140,7 +137,7 @@ def replay(
     except DataError as error:
         click.echo(str(error), err=True)
         sys.exit(1)
-    print_wide(replayed.report())
+    show(replayed.report())
     if strict and replayed.refused:
         sys.exit(1)
 

@@ -94,9 +94,14 @@ def tell(
     notice.shift_sigma = state.shift_sigma
     count = min(len(shown), row.kept, state.number - state.first + 1)
     notice.recent = count
-    for place in range(count):
+    for place in range(len(shown)):
         number = state.number - count + 1 + place
-        kept = pool[row.pool + number % row.kept]
-        shown[place].number = number
-        shown[place].time = kept.time
-        shown[place].value = kept.value
+        if place < count:
+            kept = pool[row.pool + number % row.kept]
+            shown[place].number = number
+            shown[place].time = kept.time
+            shown[place].value = kept.value
+        else:
+            shown[place].number = 0
+            shown[place].time = 0
+            shown[place].value = 0.0

@@ -8,7 +8,6 @@ from typing import Any, Final, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-
 __all__ = ["CleanColumns", "read_clean"]
 
 

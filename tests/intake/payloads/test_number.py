@@ -3,8 +3,8 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from quietmill.intake.payloads.number import NumberReader
-from quietmill.numeral import number_text
 from quietmill.model import NO_TIME, Outcome
+from quietmill.numeral import number_text
 
 
 def answer_to(payload: bytes) -> object:

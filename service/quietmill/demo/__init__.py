@@ -1,0 +1,1 @@
+"""A simulated tile works with planted faults: broker, plant and the real service, in one command."""
