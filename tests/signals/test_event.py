@@ -5,7 +5,7 @@ from typing import Any
 import jsonschema
 import numpy as np
 import pytest
-from hypothesis import given, settings
+from hypothesis import given
 from hypothesis import strategies as st
 
 from quietmill.charts.bank import Bank
@@ -193,7 +193,6 @@ def test_an_episode_from_the_bank_is_raised_joined_and_returned() -> None:
     assert over["rules"] == ["same_side", "beyond_limits"]
 
 
-@settings(deadline=None)
 @given(st.integers(0, 2**32 - 1), st.lists(st.integers(1, 199), max_size=5).map(sorted))
 def test_events_do_not_depend_on_how_the_series_is_cut(seed: int, cuts: list[int]) -> None:
     watched = press(rules="nelson", ewma={"lambda": 0.1, "L": 2.8}, cusum={"k": 0.5, "h": 5}, spread="signal")
