@@ -97,6 +97,13 @@ class Mosquitto:
         return f"mqtt://127.0.0.1:{self.port}"
 
 
+def password_file(folder: Path, user: str, password: str) -> Path:
+    """Return a file of users for the broker's `password_file`."""
+    file = folder / "users"
+    subprocess.run(["mosquitto_passwd", "-b", "-c", str(file), user, password], check=True, capture_output=True)
+    return file
+
+
 @contextlib.contextmanager
 def running(folder: Path, *lines: str) -> Iterator[Mosquitto]:
     broker = Mosquitto(folder, *lines).start()

@@ -42,21 +42,25 @@ class BufferedSocket:
     def __init__(self, raw: RawSocket) -> None:
         self.raw = raw
         self.dry = False
+        self.failure: OSError | None = None
+        """What the connection broke with, if it did."""
         self._read = b""
         self._place = 0
         self._written = bytearray()
-        self._failure: OSError | None = None
 
     def recv(self, size: int) -> bytes:
         """Return up to `size` bytes; b"" at the end. Raises `BlockingIOError` when dry, `OSError` when lost."""
         if self._place == len(self._read):
-            if self._failure is not None:
-                raise self._failure
             try:
                 self._read = self.raw.recv(READ_BYTES)
             except (BlockingIOError, ssl.SSLWantReadError, ssl.SSLWantWriteError):
+                if self.failure is not None:  # of writing; what the broker had still to say is read by now
+                    raise self.failure from None
                 self.dry = True
                 raise BlockingIOError from None
+            except OSError as error:
+                self.failure = error
+                raise
             self._place = 0
             self.dry = False
         begin = self._place
@@ -77,17 +81,13 @@ class BufferedSocket:
         except (BlockingIOError, ssl.SSLWantReadError, ssl.SSLWantWriteError):
             return
         except OSError as error:
-            self._failure = error
+            self.failure = self.failure or error
             self._written.clear()
 
     @property
     def unsent(self) -> bool:
         """Whether something waits to be sent."""
         return bool(self._written)
-
-    def pending(self) -> int:
-        """Return how many bytes wait in memory."""
-        return len(self._read) - self._place
 
     def close(self) -> None:
         """Send what the peer will still take, such as a farewell, and close the connection."""

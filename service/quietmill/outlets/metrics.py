@@ -4,25 +4,26 @@ Series of characteristics are rendered directly: 80,000 of them through a librar
 that the service does. Process-wide ones go through `prometheus_client`.
 """
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, field
 from math import inf, isnan
 from typing import Final
 
 import numpy as np
+from numpy.lib.recfunctions import repack_fields
 from numpy.typing import NDArray
 from prometheus_client import CollectorRegistry
 from prometheus_client.core import CounterMetricFamily, GaugeMetricFamily, HistogramMetricFamily, Metric
-from prometheus_client.exposition import CONTENT_TYPE_PLAIN_0_0_4, generate_latest
+from prometheus_client.exposition import generate_latest
 from prometheus_client.registry import Collector
 
 from quietmill import __version__
-from quietmill.model import Outcome, Records, Rule
+from quietmill.model import Detector, Outcome, Records, Rule
 from quietmill.settings import Characteristic
 
-__all__ = ["CONTENT_TYPE", "Copies", "Histogram", "Tally", "Writer"]
+__all__ = ["CONTENT_TYPE", "Copies", "Histogram", "Tally", "Writer", "shown"]
 
-CONTENT_TYPE: Final = CONTENT_TYPE_PLAIN_0_0_4
+CONTENT_TYPE: Final = "text/plain; version=0.0.4; charset=utf-8"
 
 SECONDS: Final = (0.0005, 0.001, 0.002, 0.005, 0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1.0, 2.0, 5.0, 10.0)
 SIZES: Final = (1, 2, 5, 10, 20, 50, 100, 200, 500, 1000, 2000, 5000)
@@ -31,21 +32,22 @@ SIZES: Final = (1, 2, 5, 10, 20, 50, 100, 200, 500, 1000, 2000, 5000)
 class Histogram:
     """Counts observations by upper bounds, many at a time."""
 
-    def __init__(self, bounds: Sequence[float]) -> None:
+    def __init__(self, bounds: Sequence[float] | NDArray[np.float64]) -> None:
         self.bounds = np.array(bounds, np.float64)
-        self.counts = np.zeros(len(bounds) + 1, np.int64)
+        self.counts = np.zeros(len(self.bounds) + 1, np.int64)
         self.sum = 0.0
 
     def observe(self, values: NDArray[np.float64]) -> None:
-        """Add observations, shape (n,)."""
+        """Add observations, shape (n,); those below 0, when the clock was set back, count as 0: sums never fall."""
+        values = np.maximum(values, 0.0)
         places = np.searchsorted(self.bounds, values)
         self.counts += np.bincount(places, minlength=len(self.counts))
         self.sum += float(values.sum())
 
     def copy(self) -> "Histogram":
         """Return what another thread may read."""
-        twin = Histogram(())
-        twin.bounds, twin.counts, twin.sum = self.bounds, self.counts.copy(), self.sum
+        twin = Histogram(self.bounds)
+        twin.counts, twin.sum = self.counts.copy(), self.sum
         return twin
 
     def family(self, name: str, documentation: str) -> HistogramMetricFamily:
@@ -75,7 +77,7 @@ class Tally:
 class Copies:
     """What one scrape shows, copied between two batches so that the web thread never reads what the loop writes.
 
-    `rows` and `state` are those of the bank (`charts.layout`), an element a characteristic.
+    `rows` and `state` (at least its fields `SHOWN`) are those of the bank, an element a characteristic.
     """
 
     rows: Records
@@ -89,7 +91,17 @@ class Copies:
     outbox: int
 
 
-class ProcessCollector(Collector):
+SHOWN: Final[tuple[str, ...]] = ("number", "value", "ewma", "cusum_high", "cusum_low", "open", "accepted", "last_time")
+"""What a scrape shows of the bank's state."""
+
+
+def shown(state: Records) -> Records:
+    """Return a copy of what a scrape shows of the bank's state: a sixth of the time that all of it would take."""
+    fields: list[str] = [*SHOWN]
+    return repack_fields(state[fields])
+
+
+class ServiceCollector(Collector):
     """The process-wide metrics of one scrape."""
 
     def __init__(self, copies: Copies) -> None:
@@ -134,53 +146,63 @@ class Writer:
     """Writes the exposition text of a plant; what does not change from scrape to scrape is prepared once."""
 
     def __init__(self, characteristics: Sequence[Characteristic]) -> None:
-        names = [f'{{characteristic="{escaped(characteristic.id)}"' for characteristic in characteristics]
         detectors = [characteristic.detector for characteristic in characteristics]
-        self._all = list(range(len(names)))
+        self._names = [f'{{characteristic="{escaped(characteristic.id)}"' for characteristic in characteristics]
+        self._all = range(len(detectors))
         self._ewma = [row for row, detector in enumerate(detectors) if detector.ewma is not None]
         self._cusum = [row for row, detector in enumerate(detectors) if detector.cusum is not None]
-        self._names = names
-        self._rules: list[tuple[int, Rule, str]] = []
-        for row, detector in enumerate(detectors):
-            used = [*sorted(detector.rules)]
-            used += [Rule.EWMA] * (detector.ewma is not None) + [Rule.CUSUM] * (detector.cusum is not None)
-            used += [Rule.SPREAD] * detector.spread_signals
-            self._rules += [(row, rule, f'{names[row]},rule="{rule.label}"}} ') for rule in used]
+        used = [(row, rule) for row, detector in enumerate(detectors) for rule in rules_of(detector)]
+        self._counted = [f'{self._names[row]},rule="{rule.label}"}}' for row, rule in used]
+        self._counted_rows = np.array([row for row, _ in used], np.int64)
+        self._counted_rules = np.array([rule for _, rule in used], np.int64)
 
     def write(self, copies: Copies) -> bytes:
         """Return the whole exposition."""
         registry = CollectorRegistry(auto_describe=False)
-        registry.register(ProcessCollector(copies))
-        return generate_latest(registry) + "".join(self._of_characteristics(copies)).encode()
+        registry.register(ServiceCollector(copies))
+        # Family by family, so that no single step keeps the loop from the interpreter for long.
+        return b"".join([generate_latest(registry), *self._of_characteristics(copies)])
 
-    def _of_characteristics(self, copies: Copies) -> Iterator[str]:
+    def _of_characteristics(self, copies: Copies) -> Iterator[bytes]:
         rows, state = copies.rows, copies.state
-        seen = state["number"] > 0
         centre, sigma, width = rows["centre"], rows["sigma"], rows["width"]
-        lasts = np.where(state["accepted"] > 0, state["last_time"] / 1e6, np.nan)
-        yield from self._family("point_value", "The last point's value.", self._all, [("", state["value"])])
-        yield from self._family("point_centre", "The centre of the control limits.", self._all, [("", centre)])
-        limits = [(',side="lower"', centre - width * sigma), (',side="upper"', centre + width * sigma)]
-        yield from self._family("point_limit", "The control limits.", self._all, limits)
-        ewma = [("", np.where(seen, centre + state["ewma"] * sigma, np.nan))]
-        yield from self._family("point_ewma", "The moving average.", self._ewma, ewma)
-        sums = [(',side="high"', state["cusum_high"]), (',side="low"', state["cusum_low"])]
-        yield from self._family("point_cusum", "The cumulative sums, in sigmas of the point.", self._cusum, sums)
-        signal_open = [("", state["open"].astype(np.float64))]
-        yield from self._family("signal_open", "Whether a signal is open.", self._all, signal_open)
+        yield self._gauge("point_value", "The last point's value.", self._all, ("", state["value"]))
+        yield self._gauge("point_centre", "The centre of the control limits.", self._all, ("", centre))
+        lower, upper = centre - width * sigma, centre + width * sigma
+        limits = ((',side="lower"', lower), (',side="upper"', upper))
+        yield self._gauge("point_limit", "The control limits.", self._all, *limits)
+        ewma = np.where(state["number"] > 0, centre + state["ewma"] * sigma, np.nan)
+        yield self._gauge("point_ewma", "The moving average.", self._ewma, ("", ewma))
+        sums = ((',side="high"', state["cusum_high"]), (',side="low"', state["cusum_low"]))
+        yield self._gauge("point_cusum", "The cumulative sums, in sigmas of the point.", self._cusum, *sums)
+        yield self._gauge("signal_open", "Whether a signal is open.", self._all, ("", state["open"] != 0))
+        last = np.where(state["accepted"] > 0, state["last_time"] / 1e6, np.nan)
         text = "Time of the last accepted reading."
-        yield from self._family("last_reading_timestamp_seconds", text, self._all, [("", lasts)])
-        yield "# HELP quietmill_signals_total Rules that started or joined an episode.\n"
-        yield "# TYPE quietmill_signals_total counter\n"
-        signals = copies.signals.tolist()
-        for row, rule, labels in self._rules:
-            yield f"quietmill_signals_total{labels}{signals[row][rule]}\n"
+        yield self._gauge("last_reading_timestamp_seconds", text, self._all, ("", last))
+        counts = copies.signals[self._counted_rows, self._counted_rules].tolist()
+        name = "quietmill_signals_total"
+        lines = (f"{name}{labels} {count}\n" for labels, count in zip(self._counted, counts, strict=True))
+        yield family(name, "Rules that started or joined an episode.", "counter", lines)
 
-    def _family(
-        self, name: str, text: str, rows: Sequence[int], columns: Sequence[tuple[str, NDArray[np.float64]]]
-    ) -> Iterator[str]:
-        yield f"# HELP quietmill_{name} {text}\n# TYPE quietmill_{name} gauge\n"
-        names = self._names
-        for labels, values in columns:
-            listed = values.tolist()
-            yield from (f"quietmill_{name}{names[row]}{labels}}} {number(listed[row])}\n" for row in rows)
+    def _gauge(self, name: str, text: str, rows: Sequence[int], *columns: tuple[str, NDArray[np.generic]]) -> bytes:
+        """Return a family of gauges: of each of `rows` a sample from every column, with the column's further label."""
+        name, names = f"quietmill_{name}", self._names
+        samples = ((label, values.astype(np.float64).tolist()) for label, values in columns)
+        lines = (f"{name}{names[row]}{label}}} {number(listed[row])}\n" for label, listed in samples for row in rows)
+        return family(name, text, "gauge", lines)
+
+
+def rules_of(detector: Detector) -> Iterator[Rule]:
+    """Yield the rules by which a detector may signal, in the order of the table."""
+    yield from sorted(detector.rules)
+    if detector.ewma is not None:
+        yield Rule.EWMA
+    if detector.cusum is not None:
+        yield Rule.CUSUM
+    if detector.spread_signals:
+        yield Rule.SPREAD
+
+
+def family(name: str, text: str, kind: str, lines: Iterable[str]) -> bytes:
+    """Return a family's samples below what says of which kind they are."""
+    return f"# HELP {name} {text}\n# TYPE {name} {kind}\n{''.join(lines)}".encode()

@@ -1,21 +1,24 @@
 """What the service says on MQTT: kept in order until the broker has it."""
 
 import json
-from collections import deque
+from collections import OrderedDict
 from collections.abc import Callable
 from typing import Final, NamedTuple, Protocol
 
-__all__ = ["EVENT_TYPE", "OUTBOX_LIMIT", "Link", "Publisher"]
+__all__ = ["EVENT_TYPE", "OUTBOX_LIMIT", "Link", "Publisher", "state_document"]
 
 EVENT_TYPE: Final = "application/cloudevents+json"
 """The content type of event documents on MQTT 5."""
-
+JSON_TYPE: Final = "application/json"
 OUTBOX_LIMIT: Final = 10_000
-"""With more waiting, the loop acknowledges no more readings, so that the broker holds them back."""
+"""With more events waiting, the loop acknowledges no more readings, so that the broker holds them back."""
 
 
 class Link(Protocol):
-    """What the publisher needs of the connection."""
+    """What the publisher needs of the connection.
+
+    What was handed over and not acknowledged when a connection ends, the link sends again on the next one, in order.
+    """
 
     connected: bool
     window: int
@@ -28,7 +31,7 @@ class Link(Protocol):
 
 
 class Letter(NamedTuple):
-    """A message that waits to be published."""
+    """A message to publish."""
 
     topic: str
     payload: bytes
@@ -39,40 +42,62 @@ class Letter(NamedTuple):
 class Publisher:
     """Publishes with QoS 1, in order, at most a window of messages ahead of the broker's acknowledgements.
 
-    What was handed over and not acknowledged when a connection ends is sent again, in order, on the next one.
+    A retained message stands for how things are: it takes the place of an older one on its topic that still waits.
+    So what waits is bounded by the number of characteristics, and by `OUTBOX_LIMIT` for events, past which `full`
+    asks the loop to hold readings back.
     """
 
     def __init__(self, link: Link, prefix: str, client_id: str) -> None:
         self._link = link
         self._prefix = prefix
-        self._waiting: deque[Letter] = deque()
+        self._waiting: OrderedDict[str | int, Letter] = OrderedDict()
         self._flying: set[int] = set()
+        self._events = 0
+        self._number = 0
         self._greeted = 0
+        self._state = "online"
         self.service_topic = f"{prefix}/service/{client_id}"
         link.on_acknowledged = self._flying.discard
 
     def event(self, characteristic: str, document: bytes) -> None:
         """Say that something happened."""
-        self._waiting.append(Letter(f"{self._prefix}/signals/{characteristic}", document, False, EVENT_TYPE))
+        self.put(f"{self._prefix}/signals/{characteristic}", document, False, EVENT_TYPE)
 
     def status(self, characteristic: str, document: bytes) -> None:
         """Say how things stand; the broker keeps the last word."""
-        self._waiting.append(Letter(f"{self._prefix}/status/{characteristic}", document, True, "application/json"))
+        self.put(f"{self._prefix}/status/{characteristic}", document, True, JSON_TYPE)
 
     def service(self, state: str) -> None:
         """Say that the service itself is `online` or `offline`."""
-        self._waiting.append(Letter(self.service_topic, state_document(state), True, "application/json"))
+        self._state = state
+        self.put(self.service_topic, state_document(state), True, JSON_TYPE)
+
+    def put(self, topic: str, payload: bytes, retain: bool, content_type: str | None) -> None:
+        """Take a message to publish behind all that wait."""
+        letter = Letter(topic, payload, retain, content_type)
+        if retain:
+            self._waiting.pop(topic, None)
+            self._waiting[topic] = letter
+        else:
+            self._number += 1
+            self._events += 1
+            self._waiting[self._number] = letter
 
     def turn(self) -> None:
-        """Hand over what may go now; greet each new connection."""
+        """Hand over what may go now; each new connection begins with the service's own state."""
         link = self._link
         if not link.connected:
             return
-        if self._greeted != link.epoch:
+        if self._greeted != link.epoch and len(self._flying) < link.window:
             self._greeted = link.epoch
-            self._waiting.appendleft(Letter(self.service_topic, state_document("online"), True, "application/json"))
+            self._hand_over(Letter(self.service_topic, state_document(self._state), True, JSON_TYPE))
         while self._waiting and len(self._flying) < link.window:
-            self._flying.add(link.publish(*self._waiting.popleft()))
+            _, letter = self._waiting.popitem(last=False)
+            self._events -= not letter.retain
+            self._hand_over(letter)
+
+    def _hand_over(self, letter: Letter) -> None:
+        self._flying.add(self._link.publish(*letter))
 
     @property
     def outstanding(self) -> int:
@@ -81,8 +106,8 @@ class Publisher:
 
     @property
     def full(self) -> bool:
-        """Whether so much waits that no more readings should be acknowledged."""
-        return len(self._waiting) > OUTBOX_LIMIT
+        """Whether so many events wait that no more readings should be acknowledged."""
+        return self._events > OUTBOX_LIMIT
 
 
 def state_document(state: str) -> bytes:

@@ -4,6 +4,7 @@ import socket
 import threading
 import time
 from collections.abc import Callable
+from concurrent.futures import Future
 from typing import Final
 
 import uvicorn
@@ -20,52 +21,83 @@ COPY_SECONDS: Final = 5.0
 """How long a scrape waits for the loop."""
 BEAT_SECONDS: Final = 10.0
 """A loop that has not turned for so long is stuck; idle, it turns at least once a second."""
+GRACE_SECONDS: Final = 1
+"""How long a stop waits for answers under way."""
+MOST_CONNECTIONS: Final = 100
+"""More at a time are sent away: each may hold an exposition of many megabytes."""
+BACKLOG: Final = 128
+"""So many connections wait to be taken."""
 
 
 class Health:
-    """What the loop says of itself at each turn."""
+    """What the loop says of itself at each turn; `clock` gives seconds that never fall."""
 
-    def __init__(self) -> None:
-        self.beat = time.monotonic()
+    def __init__(self, clock: Callable[[], float] = time.monotonic) -> None:
+        self._clock = clock
+        self._beat = clock()
         self.troubles: tuple[str, ...] = ("the service is starting",)
 
     def turn(self, troubles: tuple[str, ...]) -> None:
         """Note that the loop turns, and why it may not be ready."""
-        self.beat = time.monotonic()
+        self._beat = self._clock()
         self.troubles = troubles
+
+    @property
+    def stuck(self) -> str | None:
+        """What there is to say of a loop that does not turn."""
+        age_seconds = self._clock() - self._beat
+        return f"the loop has not turned for {age_seconds:.0f} s" if age_seconds > BEAT_SECONDS else None
 
 
 class Handover:
-    """Hands copies of the arrays from the loop to whoever asks; none are made unasked."""
+    """Hands copies of the arrays from the loop to whoever asks; none are made unasked.
+
+    `wake` rouses the loop where it waits for readings.
+    """
 
     def __init__(self, wake: Callable[[], None]) -> None:
         self._wake = wake
-        self._asked = threading.Event()
-        self._turnstile = threading.Lock()
-        self._given = threading.Event()
-        self._copies: Copies | None = None
+        self._lock = threading.Lock()
+        self._request: Future[Copies | None] | None = None
+        self._closed = False
 
     def ask(self, timeout_seconds: float) -> Copies | None:
         """Return fresh copies, or None when the loop gives none in time. For any thread but the loop's."""
-        with self._turnstile:
-            self._given.clear()
-            self._copies = None
-            self._asked.set()
-            self._wake()
-            self._given.wait(timeout_seconds)
-            self._asked.clear()
-            return self._copies
+        with self._lock:
+            if self._closed:
+                return None
+            if self._request is None:
+                self._request = Future()
+            # One request stands for all that ask meanwhile: a stuck loop gathers no queue.
+            request = self._request
+        self._wake()
+        try:
+            return request.result(timeout_seconds)
+        except TimeoutError:
+            return None
 
     def serve(self, make: Callable[[], Copies]) -> None:
         """Make copies if somebody waits for them. For the loop, between two batches."""
-        if self._asked.is_set():
-            self._asked.clear()
-            self._copies = make()
-            self._given.set()
+        if self._request is None:
+            return
+        with self._lock:
+            request, self._request = self._request, None
+        if request is not None:
+            request.set_result(make())
+
+    def close(self) -> None:
+        """Send away who waits and who will ask: the loop serves no more."""
+        with self._lock:
+            request, self._request, self._closed = self._request, None, True
+        if request is not None:
+            request.set_result(None)
 
 
 class WebServer:
-    """Serves `/metrics`, `/healthz` and `/readyz`. Raises `OSError` where the address cannot be had."""
+    """Serves `/metrics`, `/healthz` and `/readyz`.
+
+    The address is taken, and connections wait, as soon as it is built; raises `OSError` where it cannot be had.
+    """
 
     def __init__(self, host: str, port: int, writer: Writer, handover: Handover, health: Health) -> None:
         self._writer, self._handover, self._health = writer, handover, health
@@ -74,12 +106,21 @@ class WebServer:
         self._socket.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
         try:
             self._socket.bind((host, port))
+            # Two sockets may be bound to one address, but only one may listen there.
+            self._socket.listen(BACKLOG)
         except OSError:
             self._socket.close()
             raise
         routes = [Route("/metrics", self.metrics), Route("/healthz", self.healthz), Route("/readyz", self.readyz)]
         config = uvicorn.Config(
-            Starlette(routes=routes), log_config=None, access_log=False, lifespan="off", timeout_graceful_shutdown=1
+            Starlette(routes=routes),
+            log_config=None,
+            access_log=False,
+            server_header=False,
+            lifespan="off",
+            ws="none",
+            limit_concurrency=MOST_CONNECTIONS,
+            timeout_graceful_shutdown=GRACE_SECONDS,
         )
         self._server = uvicorn.Server(config)
         self._thread = threading.Thread(target=self._server.run, args=([self._socket],), name="web", daemon=True)
@@ -94,28 +135,34 @@ class WebServer:
         self._thread.start()
 
     def stop(self) -> None:
-        """End within some seconds."""
+        """End, whether started or not; answers under way have a second."""
+        self._handover.close()
         self._server.should_exit = True
-        self._thread.join(3)
+        if self._thread.is_alive():
+            self._thread.join(GRACE_SECONDS + 2)
         self._socket.close()
 
     def metrics(self, _request: Request) -> Response:
         """Return the exposition; 503 when the loop gives no copies."""
         copies = self._handover.ask(COPY_SECONDS)
         if copies is None:
-            return PlainTextResponse(f"the loop has not answered for {COPY_SECONDS:g} s\n", 503)
+            return unavailable(f"the loop has not answered for {COPY_SECONDS:g} s")
         return Response(self._writer.write(copies), headers={"content-type": CONTENT_TYPE})
 
-    def healthz(self, _request: Request) -> Response:
-        """Return 200 while the loop turns."""
-        age = time.monotonic() - self._health.beat
-        if age > BEAT_SECONDS:
-            return PlainTextResponse(f"the loop has not turned for {age:.0f} s\n", 503)
-        return PlainTextResponse("the loop turns\n")
+    # Health answers without a worker thread: they may all be waiting for a stuck loop.
 
-    def readyz(self, _request: Request) -> Response:
+    async def healthz(self, _request: Request) -> Response:
+        """Return 200 while the loop turns."""
+        stuck = self._health.stuck
+        return unavailable(stuck) if stuck else PlainTextResponse("the loop turns\n")
+
+    async def readyz(self, _request: Request) -> Response:
         """Return 200 when readings can come in, else 503 and why not."""
-        troubles = self._health.troubles
-        if troubles:
-            return PlainTextResponse("".join(f"{trouble}\n" for trouble in troubles), 503)
-        return PlainTextResponse("ready\n")
+        stuck = self._health.stuck
+        troubles = (stuck, *self._health.troubles) if stuck else self._health.troubles
+        return unavailable(*troubles) if troubles else PlainTextResponse("ready\n")
+
+
+def unavailable(*reasons: str) -> Response:
+    """Return an answer that says why there is none, a line a reason."""
+    return PlainTextResponse("".join(f"{reason}\n" for reason in reasons), 503)

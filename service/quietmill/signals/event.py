@@ -2,16 +2,17 @@
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 from math import isnan
 from typing import Any, Final
 
 import msgspec
 
 from quietmill.instant import format_time
-from quietmill.model import Direction, Ended, Notice, Rule, Verdicts, direction_of, rules_in
+from quietmill.model import Direction, Ended, Notice, Records, Rule, Verdicts, direction_of, rules_in
 from quietmill.settings import Characteristic
 from quietmill.signals.identity import event_id
-from quietmill.signals.sentence import episode_returned, rule_joined, signal_raised
+from quietmill.signals.sentence import Shown, episode_returned, rule_joined, signal_raised
 
 __all__ = ["TYPES", "Event", "Herald"]
 
@@ -22,6 +23,9 @@ TYPES: Final = {
 }
 
 encode = msgspec.json.Encoder().encode
+
+written = lru_cache(maxsize=16_384)(format_time)
+"""A time as text: the events of one episode show many of the same points."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -49,13 +53,19 @@ def or_null(value: float) -> float | None:
     return None if isnan(value) else value
 
 
-def in_order(order: int) -> list[Rule]:
+def in_order(order: int) -> list[str]:
     """Return the rules of an episode in the order of joining (`NOTICE.order`)."""
-    rules: list[Rule] = []
+    rules: list[str] = []
     while order:
-        rules.append(Rule((order & 15) - 1))
+        rules.append(Rule((order & 15) - 1).label)
         order >>= 4
     return rules
+
+
+def records(array: Records) -> list[dict[str, Any]]:
+    """Return the records of an array as plain numbers by name: reading them one by one from numpy is slow."""
+    fields = array.dtype.names or ()
+    return [dict(zip(fields, values, strict=True)) for values in array.tolist()]
 
 
 class Herald:
@@ -70,56 +80,54 @@ class Herald:
 
     def events(self, verdicts: Verdicts) -> list[Event]:
         """Return the events of a batch, in the order in which they arose."""
+        if not len(verdicts.notices):
+            return []
+        notices, points = records(verdicts.notices), records(verdicts.points[verdicts.notices["point"]])
         return [
-            self._event(notice, verdicts.points[notice["point"]], shown)
-            for notice, shown in zip(verdicts.notices, verdicts.recent, strict=True)
+            self._event(notice, point, recent[: notice["recent"]].tolist())
+            for notice, point, recent in zip(notices, points, verdicts.recent, strict=True)
         ]
 
-    def _event(self, notice: Any, point: Any, shown: Any) -> Event:
-        kind, row = Notice(int(notice["kind"])), int(notice["row"])
+    def _event(self, notice: dict[str, Any], point: dict[str, Any], recent: list[tuple[int, int, float]]) -> Event:
+        kind, row = Notice(notice["kind"]), notice["row"]
         characteristic = self._characteristics[row]
         name, baseline = characteristic.id, characteristic.baseline.version
-        start, number, time = int(notice["start"]), int(point["number"]), int(point["time"])
-        identity = event_id(name, baseline, start, number, TYPES[kind])
-        signal = event_id(name, baseline, start, int(notice["raised_number"]), TYPES[Notice.RAISED])
-        started = tuple(rules_in(int(notice["joined"])))
-        direction = direction_of(int(notice["members"]))
-        summary = self._summary(kind, characteristic, notice, point, started, direction)
+        start, raised_number = notice["start"], notice["raised_number"]
+        signal = event_id(name, baseline, start, raised_number, TYPES[Notice.RAISED])
+        identity = signal
+        if kind is not Notice.RAISED:
+            identity = event_id(name, baseline, start, point["number"], TYPES[kind])
+        direction = direction_of(notice["members"])
+        favourable = direction is not Direction.NONE and direction.label == characteristic.favourable
+        time = format_time(point["time"])
+        summary = summary_of(kind, characteristic, favourable, notice, point)
         data: dict[str, Any] = {
             "signal": signal,
             "characteristic": name,
             "unit": characteristic.unit,
             "labels": characteristic.labels,
             "summary": summary,
-            "rules": [rule.label for rule in in_order(int(notice["order"]))],
+            "rules": in_order(notice["order"]),
             "direction": direction.label,
-            "favourable": direction.label == characteristic.favourable and direction != Direction.NONE,
-            "point": {
-                "number": number,
-                "time": format_time(time),
-                "value": float(point["value"]),
-                "z": float(point["z"]),
-            },
-            "centre": float(point["centre"]),
-            "sigma": float(point["sigma"]),
-            "limits": {"lower": or_null(float(point["lower"])), "upper": or_null(float(point["upper"]))},
-            "spread": self._spread(point),
+            "favourable": favourable,
+            "point": {"number": point["number"], "time": time, "value": point["value"], "z": point["z"]},
+            "centre": point["centre"],
+            "sigma": point["sigma"],
+            "limits": {"lower": or_null(point["lower"]), "upper": or_null(point["upper"])},
+            "spread": spread_of(point),
             "baseline": baseline,
-            "specification": self._specification(characteristic, float(point["value"])),
+            "specification": specification_of(characteristic, point["value"]),
             "onset": {
-                "time": format_time(int(notice["onset_time"])),
-                "point": int(notice["onset_number"]),
-                "shift": or_null(float(notice["shift"])),
-                "shift_sigma": or_null(float(notice["shift_sigma"])),
+                "time": format_time(notice["onset_time"]),
+                "point": notice["onset_number"],
+                "shift": or_null(notice["shift"]),
+                "shift_sigma": or_null(notice["shift_sigma"]),
             },
-            "recent": [
-                {"number": number, "time": format_time(time), "value": value}
-                for number, time, value in shown[: int(notice["recent"])].tolist()
-            ],
+            "recent": [{"number": number, "time": written(time), "value": value} for number, time, value in recent],
             "reaction": characteristic.reaction,
         }
         if kind is Notice.RETURNED:
-            data["ended"] = Ended(int(notice["ended"])).label
+            data["ended"] = Ended(notice["ended"]).label
         document = encode(
             {
                 "specversion": "1.0",
@@ -127,63 +135,44 @@ class Herald:
                 "source": self._source,
                 "type": TYPES[kind],
                 "subject": name,
-                "time": format_time(time),
+                "time": time,
                 "datacontenttype": "application/json",
                 "data": data,
             }
         )
-        raised = int(notice["raised_time"])
-        return Event(identity, kind, row, name, signal, time, raised, started, summary, document)
+        started = tuple(rules_in(notice["joined"]))
+        raised_time = notice["raised_time"]
+        return Event(identity, kind, row, name, signal, point["time"], raised_time, started, summary, document)
 
-    @staticmethod
-    def _spread(point: Any) -> dict[str, float | None] | None:
-        """Return the spread statistic with its limits, or None where there is none (yet)."""
-        value = float(point["spread"])
-        if isnan(value):
-            return None
-        lower, upper = or_null(float(point["spread_lower"])), or_null(float(point["spread_upper"]))
-        return {"value": value, "lower": lower, "upper": upper}
 
-    @staticmethod
-    def _specification(characteristic: Characteristic, value: float) -> dict[str, Any] | None:
-        """Return what was promised and whether the reading keeps it, limits included."""
-        specification = characteristic.specification
-        if specification is None:
-            return None
-        lower, upper = specification.lower, specification.upper
-        met = (lower is None or value >= lower) and (upper is None or value <= upper)
-        return {"lower": lower, "upper": upper, "met": met}
+def spread_of(point: dict[str, Any]) -> dict[str, float | None] | None:
+    """Return the spread statistic with its limits, or None where there is none (yet)."""
+    if isnan(point["spread"]):
+        return None
+    lower, upper = or_null(point["spread_lower"]), or_null(point["spread_upper"])
+    return {"value": point["spread"], "lower": lower, "upper": upper}
 
-    @staticmethod
-    def _summary(
-        kind: Notice,
-        characteristic: Characteristic,
-        notice: Any,
-        point: Any,
-        started: Sequence[Rule],
-        direction: Direction,
-    ) -> str:
-        name, unit = characteristic.id, characteristic.unit
-        value, sigma, time = float(point["value"]), float(point["sigma"]), int(point["time"])
-        raised = int(notice["raised_time"])
-        if kind is Notice.JOINED:
-            joined = direction_of(int(notice["joined"]))
-            return rule_joined(name, unit, started, joined, value, sigma, raised, time)
-        if kind is Notice.RETURNED:
-            quiet = characteristic.detector.quiet_points
-            return episode_returned(name, Ended(int(notice["ended"])), quiet, raised, time)
-        return signal_raised(
-            name,
-            unit,
-            started,
-            direction,
-            direction.label == characteristic.favourable and direction != Direction.NONE,
-            value,
-            float(point["centre"]),
-            sigma,
-            float(point["lower"]),
-            float(point["upper"]),
-            float(notice["shift"]),
-            int(notice["onset_time"]),
-            time,
-        )
+
+def specification_of(characteristic: Characteristic, value: float) -> dict[str, Any] | None:
+    """Return what was promised and whether the reading keeps it, limits included."""
+    specification = characteristic.specification
+    if specification is None:
+        return None
+    lower, upper = specification.lower, specification.upper
+    met = (lower is None or value >= lower) and (upper is None or value <= upper)
+    return {"lower": lower, "upper": upper, "met": met}
+
+
+def summary_of(
+    kind: Notice, characteristic: Characteristic, favourable: bool, notice: dict[str, Any], point: dict[str, Any]
+) -> str:
+    """Return the sentence of an event."""
+    name, shown = characteristic.id, Shown(characteristic.unit, *(point[field] for field in Shown._fields[1:]))
+    match kind:
+        case Notice.RAISED:
+            return signal_raised(name, notice["joined"], favourable, notice["shift"], notice["onset_time"], shown)
+        case Notice.JOINED:
+            return rule_joined(name, notice["joined"], notice["raised_time"], shown)
+        case Notice.RETURNED:
+            quiet_points = characteristic.detector.quiet_points
+            return episode_returned(name, Ended(notice["ended"]), quiet_points, notice["raised_time"], shown)

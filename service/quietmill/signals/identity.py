@@ -11,6 +11,8 @@ __all__ = ["NAMESPACE", "event_id"]
 NAMESPACE: Final = UUID("6f1c7a52-5d0e-5b43-9a8e-2f4b7c1d9e60")
 """The namespace of all event ids; it never changes, or every consumer would see every event anew."""
 
+encode = json.JSONEncoder(ensure_ascii=False, separators=(",", ":")).encode
+
 
 def event_id(characteristic: str, baseline: str, start: int, number: int, kind: str, command: str = "") -> str:
     """Return the UUIDv5 of an event.
@@ -20,4 +22,4 @@ def event_id(characteristic: str, baseline: str, start: int, number: int, kind: 
     """
     begun = "" if start == NO_TIME else start
     name = [characteristic, baseline, begun, number, kind, command]
-    return str(uuid5(NAMESPACE, json.dumps(name, ensure_ascii=False, separators=(",", ":"))))
+    return str(uuid5(NAMESPACE, encode(name)))
