@@ -89,6 +89,7 @@ def test_a_spread_is_shown_with_its_limits() -> None:
         (250.0, {"lower": 230.0, "upper": 250.0}, True),
         (250.1, {"lower": 230.0, "upper": 250.0}, False),
         (229.9, {"lower": 230.0}, False),
+        (230.0, {"lower": 230.0}, True),
         (1000.0, {"lower": 230.0}, True),
         (230.0, {"upper": 230.0}, True),
     ],
