@@ -4,6 +4,7 @@ import contextlib
 import shutil
 import socket
 import threading
+import time
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -12,7 +13,7 @@ from structlog.testing import capture_logs
 from websockets.exceptions import ConnectionClosed
 from websockets.sync.server import ServerConnection, serve
 
-from broker import Mosquitto, running
+from broker import PATIENCE_SECONDS, Mosquitto, running
 from certificates import Authority, locked
 from intake.link import TOPICS, connection, drive, payloads, ready, reasons, take
 from quietmill.intake.trouble import CredentialsError
@@ -57,11 +58,13 @@ def troubles(url: str, **settings: object) -> str:
 def test_an_encrypted_connection_with_the_plants_own_authority(
     tmp_path: Path, authority: Authority, version: str
 ) -> None:
-    with running(tmp_path, *encrypted(authority)) as broker:
-        with connection(url_of(broker), ca_file=authority.certificate, version=version) as link:
-            drive(link, lambda: ready(link))
-            link.publish(TOPICS[0], b"x" * 100_000, False, None)
-            assert take(link, 1)[0].payload == b"x" * 100_000
+    with (
+        running(tmp_path, *encrypted(authority)) as broker,
+        connection(url_of(broker), ca_file=authority.certificate, version=version) as link,
+    ):
+        drive(link, lambda: ready(link))
+        link.publish(TOPICS[0], b"x" * 100_000, False, None)
+        assert take(link, 1)[0].payload == b"x" * 100_000
 
 
 def test_a_full_batch_leaves_nothing_behind_in_the_decrypted_stream(
@@ -74,9 +77,10 @@ def test_a_full_batch_leaves_nothing_behind_in_the_decrypted_stream(
         drive(link, lambda: ready(link))
         for place in range(30):
             link.publish(TOPICS[0], str(place).encode(), False, None)
-        taken = take(link, 1)
+        taken, begin = take(link, 1), time.monotonic()
         while len(taken) < 30:
-            taken += link.take(60)
+            taken += link.take(PATIENCE_SECONDS)
+        assert time.monotonic() - begin < PATIENCE_SECONDS
         assert payloads(taken) == [str(place) for place in range(30)]
 
 
@@ -131,12 +135,12 @@ def test_a_renewed_certificate_is_used_without_a_restart(
     for source, copy in zip(stranger.issue("old", "clientAuth"), mine, strict=True):
         shutil.copy(source, copy)
     files = {"ca_file": authority.certificate, "certificate_file": mine[0], "key_file": mine[1]}
-    with running(tmp_path / "b", *encrypted(authority, "require_certificate true")) as broker:
-        with connection(url_of(broker), **files) as link:
-            drive(link, lambda: link._attempts.failures >= 1, "the old one to be refused")
-            for source, copy in zip(authority.issue("new", "clientAuth"), mine, strict=True):
-                shutil.copy(source, copy)
-            drive(link, lambda: ready(link))
+    lines = encrypted(authority, "require_certificate true")
+    with running(tmp_path / "b", *lines) as broker, connection(url_of(broker), **files) as link:
+        drive(link, lambda: link._attempts.failures >= 1, "the old one to be refused")
+        for source, copy in zip(authority.issue("new", "clientAuth"), mine, strict=True):
+            shutil.copy(source, copy)
+        drive(link, lambda: ready(link))
 
 
 def test_certificates_that_cannot_be_used_are_refused_at_the_start(tmp_path: Path, authority: Authority) -> None:

@@ -103,12 +103,16 @@ def test_a_bad_password_is_said_so_and_a_new_one_is_read(tmp_path: Path, version
     secret = tmp_path / "secret"
     secret.write_text("wrong\n")
     account = {"user": "press", "password_file": secret, "version": version}
-    with running(tmp_path / "b", f"password_file {password_file(tmp_path, 'press', 'right')}") as broker:
-        with capture_logs() as logs, connection(broker.url, **account) as link:
-            drive(link, lambda: link._attempts.failures >= 3, "three attempts")
-            assert "broker.password_file" in link.trouble
-            secret.write_text("right\n")
-            drive(link, lambda: ready(link), "the right password to be read")
+    users = password_file(tmp_path, "press", "right")
+    with (
+        running(tmp_path / "b", f"password_file {users}") as broker,
+        capture_logs() as logs,
+        connection(broker.url, **account) as link,
+    ):
+        drive(link, lambda: link._attempts.failures >= 3, "three attempts")
+        assert "broker.password_file" in link.trouble
+        secret.write_text("right\n")
+        drive(link, lambda: ready(link), "the right password to be read")
     assert reasons(logs).count("broker.password_file") == 1
 
 
@@ -142,26 +146,36 @@ def test_a_broker_of_another_protocol_version_is_said_so(version: str, code: byt
 
 
 def test_two_services_of_one_client_id_are_told_and_slow_down(tmp_path: Path) -> None:
-    with running(tmp_path) as broker, capture_logs() as logs, connection(broker.url) as one:
-        with connection(broker.url) as other:
-            drive(one, lambda: other.take(0.0) or reasons(logs).count("another client") >= 2, "the two to fight")
-            drive(one, lambda: other.take(0.0) or min(one._attempts._delay, other._attempts._delay) > 0.3)
+    with (
+        running(tmp_path) as broker,
+        capture_logs() as logs,
+        connection(broker.url) as one,
+        connection(broker.url) as other,
+    ):
+        drive(one, lambda: other.take(0.0) or reasons(logs).count("another client") >= 2, "the two to fight")
+        drive(one, lambda: other.take(0.0) or min(one._attempts._delay, other._attempts._delay) > 0.3)
     assert reasons(logs).count("another client may use the id 'quietmill'") == 2
     assert "give each service a broker.client_id of its own" in reasons(logs)
 
 
 @pytest.mark.parametrize(
-    ("code", "said"),
-    [(SESSION_TAKEN_OVER, "another client has connected as 'quietmill'"), (SERVER_SHUTTING_DOWN, "shutting down")],
+    ("code", "said", "delay"),
+    [
+        (SESSION_TAKEN_OVER, "another client has connected as 'quietmill'", 0.2),
+        (SERVER_SHUTTING_DOWN, "the broker closed the connection (Server shutting down)", 0.1),
+    ],
 )
-def test_what_a_broker_says_on_parting_is_passed_on(code: bytes, said: str) -> None:
+def test_what_a_broker_says_on_parting_is_passed_on_and_a_takeover_slows_down_at_once(
+    code: bytes, said: str, delay: float
+) -> None:
     def script(talk: Conversation) -> None:
         talk.accept("5")
         talk.say(packet(DISCONNECT, code))
 
     with scripted(script) as peer, capture_logs() as logs, connection(peer.url) as link:
-        drive(link, lambda: reasons(logs), "the log line")
-    assert said in reasons(logs)
+        drive(link, lambda: link._attempts._short_lives == 2, "two connections")
+        assert link._attempts._delay == pytest.approx(delay)
+    assert reasons(logs).count(said) == 1
 
 
 @VERSIONS
@@ -172,9 +186,9 @@ def test_a_broker_that_falls_silent_is_left_after_the_keepalive(version: str) ->
         talk.accept(version)
         silence(talk)
 
-    with scripted(script) as peer, capture_logs() as logs:
-        with connection(peer.url, version=version, keepalive="1s") as link:
-            drive(link, lambda: peer.connections >= 2, "another attempt")
+    settings = {"version": version, "keepalive": "1s"}
+    with scripted(script) as peer, capture_logs() as logs, connection(peer.url, **settings) as link:
+        drive(link, lambda: peer.connections >= 2, "another attempt")
     assert reasons(logs) == "the broker has not answered for 1 s (broker.keepalive)"
 
 
