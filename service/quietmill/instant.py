@@ -122,8 +122,17 @@ def format_time(instant: int) -> str:
     >>> format_time(1_772_439_270_250_000)
     '2026-03-02T08:14:30.25Z'
     """
-    text = (_EPOCH + timedelta(microseconds=_checked(instant, instant))).replace(tzinfo=None).isoformat()
-    return f"{text.rstrip('0')}Z" if "." in text else f"{text}Z"
+    minute, rest = divmod(_checked(instant, instant), 60 * MICROSECONDS_PER_SECOND)
+    second, fraction = divmod(rest, MICROSECONDS_PER_SECOND)
+    if not fraction:
+        return f"{_minute(minute)}{second:02}Z"
+    return f"{_minute(minute)}{second:02}." + f"{fraction:06}".rstrip("0") + "Z"
+
+
+@lru_cache(maxsize=4096)  # of all instants that are written, most lie in one of the last minutes
+def _minute(minute: int) -> str:
+    """Return the text of a minute, up to its seconds."""
+    return (_EPOCH + timedelta(minutes=minute)).isoformat()[:17]
 
 
 def _power(number: float | Decimal, unit: str | None) -> int:

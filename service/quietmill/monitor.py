@@ -18,6 +18,7 @@ import signal
 import sys
 import time
 from collections.abc import Iterator, Mapping, Sequence
+from errno import EADDRINUSE
 from typing import Final
 
 import numpy as np
@@ -30,7 +31,7 @@ from quietmill.intake.broker import Connection, Will
 from quietmill.intake.message import Message
 from quietmill.intake.routes import Note, Routes
 from quietmill.model import NO_TIME, READING, Notice, Outcome, Verdicts
-from quietmill.outlets.metrics import Copies, Tally, Writer
+from quietmill.outlets.metrics import Copies, Tally, Writer, shown
 from quietmill.outlets.publisher import OUTBOX_LIMIT, Publisher, state_document
 from quietmill.outlets.web import Handover, Health, WebServer
 from quietmill.settings import Settings
@@ -90,7 +91,8 @@ class Monitor:
         except OSError as error:
             self.connection.close()
             reason = error.strerror or str(error)
-            raise StartError(f"web.listen {web.listen} cannot be served: {reason}; is another service there?") from None
+            question = "; is another service there?" if error.errno == EADDRINUSE else ""
+            raise StartError(f"web.listen {web.listen} cannot be served: {reason}{question}") from None
 
     def start(self) -> None:
         """Compile the bank, then open the doors."""
@@ -200,7 +202,7 @@ class Monitor:
         tally = self.tally
         return Copies(
             rows=self.bank.rows,
-            state=self.bank.state.copy(),
+            state=shown(self.bank.state),
             signals=tally.signals.copy(),
             outcomes=tally.outcomes.copy(),
             decision=tally.decision.copy(),
@@ -220,6 +222,7 @@ class Monitor:
 
         What still comes in is neither judged nor acknowledged: the broker keeps it for the next start.
         """
+        self.handover.close()
         self.publisher.service("offline")
         end = time.monotonic() + FAREWELL_SECONDS
         while self.connection.connected and self.publisher.outstanding and time.monotonic() < end:
