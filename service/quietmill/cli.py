@@ -120,7 +120,7 @@ def replay(
 ) -> None:
     """Judge history with the engine that judges live readings.
 
-    DATA is CSV (or Parquet) with the columns time, characteristic, value.
+    DATA is CSV with the columns time, characteristic, value.
 
     \b
     Example:   quietmill replay plant.yaml march.csv --signals march.jsonl
@@ -153,7 +153,9 @@ def replay(
 )
 @click.option("--seed", type=int, default=1, show_default=True, help="The same seed gives the same plant and faults.")
 def demo(duration: float | None, pace: float, seed: int) -> None:
-    """Watch a simulated tile works: a broker, a plant with planted faults, and the service.
+    """Watch the service find faults planted in a simulated tile works.
+
+    A broker, the plant and the real service, with no other program.
 
     \b
     Example:   quietmill demo --for 60s
