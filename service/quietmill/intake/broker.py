@@ -157,7 +157,7 @@ class Connection:
     def _turn_towards_broker(self) -> None:
         """Begin, finish or give up an attempt to connect."""
         now = time.monotonic()
-        if self._socket is None and not self._closing:
+        if self._socket is None:
             made = self._attempts.turn(now)
             if isinstance(made, BaseException):
                 self._failed(made)
