@@ -132,7 +132,7 @@ class Monitor:
         verdicts = self.bank.judge(decoded.readings)
         for event in self.herald.events(verdicts):
             self._speak(event)
-        self._unacknowledged += batch
+        self._unacknowledged += [message for message in batch if message.qos]
         self._count(decoded.readings, decoded.refused, verdicts)
         for note in decoded.notes:
             self._note(note)
