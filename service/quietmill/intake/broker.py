@@ -48,6 +48,8 @@ class Connection:
         self.connected = False
         self.sessions_lost = 0
         """Counts connections after which all status must be told anew: the first, and each without a session."""
+        self.sessions_begun = 0
+        """Counts connections to a broker that knew no session of ours; packet ids begin anew with each."""
         self.messages_qos0 = 0
         self.publications_refused = 0
         """Counts what the broker would not publish for us."""
@@ -66,6 +68,7 @@ class Connection:
         self._refusal = ""
         self._refused_before: set[str] = set()
         self._closing = False
+        self._suspended = False
         self._selector = selectors.DefaultSelector()
         self._wakes, self._waker = socket.socketpair()
         self._wakes.setblocking(False)
@@ -136,6 +139,20 @@ class Connection:
         if self._socket is not None:
             self._socket.flush()
             self._watch(self._socket)
+
+    def suspend(self) -> None:
+        """Hang up and stay away until `resume`; the broker keeps the session and queues for it.
+
+        To stop reading and keep the connection is not possible: a broker drops a client that reads no ping replies.
+        """
+        if not self._suspended:
+            self._suspended = True
+            self._trouble = "the service holds more readings than it can keep"
+            self._drop()
+
+    def resume(self) -> None:
+        """Come back after `suspend`."""
+        self._suspended = False
 
     def close(self) -> None:
         """Disconnect; the broker keeps the session."""
@@ -242,6 +259,7 @@ class Connection:
         self._refused_before.clear()
         if not (known_before and flags.session_present):
             self.sessions_lost += 1
+        self.sessions_begun += not flags.session_present
         if known_before and not flags.session_present:
             log.warning(
                 "the broker has lost the session", meaning="possible gap: readings sent meanwhile may be missing"

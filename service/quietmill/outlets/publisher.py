@@ -37,6 +37,8 @@ class Letter(NamedTuple):
     payload: bytes
     retain: bool
     content_type: str | None
+    number: int = 0
+    """Its place in a durable outbox; 0 where there is none."""
 
 
 class Publisher:
@@ -51,33 +53,36 @@ class Publisher:
         self._link = link
         self._prefix = prefix
         self._waiting: OrderedDict[str | int, Letter] = OrderedDict()
-        self._flying: set[int] = set()
+        self._flying: dict[int, int] = {}
         self._events = 0
         self._number = 0
         self._greeted = 0
         self._state = "online"
         self.service_topic = f"{prefix}/service/{client_id}"
-        link.on_acknowledged = self._flying.discard
+        self.on_delivered: Callable[[int], None] = lambda _number: None
+        """Called with the number of each letter that need not be sent any more."""
+        link.on_acknowledged = self._acknowledged
 
-    def event(self, characteristic: str, document: bytes) -> None:
-        """Say that something happened."""
-        self.put(f"{self._prefix}/signals/{characteristic}", document, False, EVENT_TYPE)
+    def event_letter(self, characteristic: str, document: bytes) -> Letter:
+        """Return what says that something happened."""
+        return Letter(f"{self._prefix}/signals/{characteristic}", document, False, EVENT_TYPE)
 
-    def status(self, characteristic: str, document: bytes) -> None:
-        """Say how things stand; the broker keeps the last word."""
-        self.put(f"{self._prefix}/status/{characteristic}", document, True, JSON_TYPE)
+    def status_letter(self, characteristic: str, document: bytes) -> Letter:
+        """Return what says how things stand; the broker keeps the last word."""
+        return Letter(f"{self._prefix}/status/{characteristic}", document, True, JSON_TYPE)
 
     def service(self, state: str) -> None:
         """Say that the service itself is `online` or `offline`."""
         self._state = state
-        self.put(self.service_topic, state_document(state), True, JSON_TYPE)
+        self.put(Letter(self.service_topic, state_document(state), True, JSON_TYPE))
 
-    def put(self, topic: str, payload: bytes, retain: bool, content_type: str | None) -> None:
+    def put(self, letter: Letter) -> None:
         """Take a message to publish behind all that wait."""
-        letter = Letter(topic, payload, retain, content_type)
-        if retain:
-            self._waiting.pop(topic, None)
-            self._waiting[topic] = letter
+        if letter.retain:
+            older = self._waiting.pop(letter.topic, None)
+            if older is not None:
+                self._done(older.number)
+            self._waiting[letter.topic] = letter
         else:
             self._number += 1
             self._events += 1
@@ -97,7 +102,15 @@ class Publisher:
             self._hand_over(letter)
 
     def _hand_over(self, letter: Letter) -> None:
-        self._flying.add(self._link.publish(*letter))
+        topic, payload, retain, content_type, number = letter
+        self._flying[self._link.publish(topic, payload, retain, content_type)] = number
+
+    def _acknowledged(self, mid: int) -> None:
+        self._done(self._flying.pop(mid, 0))
+
+    def _done(self, number: int) -> None:
+        if number:
+            self.on_delivered(number)
 
     @property
     def outstanding(self) -> int:

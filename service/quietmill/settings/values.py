@@ -4,7 +4,7 @@ import re
 import unicodedata
 from typing import Annotated, Any, Final
 
-from pydantic import AfterValidator, BeforeValidator, Field, PlainValidator
+from pydantic import AfterValidator, BeforeValidator, Field, PlainSerializer, PlainValidator
 
 from quietmill.model import COUNTS, NELSON, Rule
 from quietmill.settings.problems import nearest, shown
@@ -153,7 +153,17 @@ def not_yet(_value: Any) -> None:
     raise ValueError("is not supported yet; leave it out")
 
 
-Duration = Annotated[int, PlainValidator(parse_duration)]
+def duration_text(microseconds: int) -> str:
+    """Return a duration as a settings file would write it."""
+    return f"{microseconds / 1e6:.6f}s"
+
+
+def rule_text(rule: tuple[Rule, float]) -> Any:
+    """Return a rule as a settings file would write it."""
+    return {rule[0].label: rule[1]} if rule[0] in COUNTS else rule[0].label
+
+
+Duration = Annotated[int, PlainValidator(parse_duration), PlainSerializer(duration_text, when_used="json")]
 """Microseconds."""
 Size = Annotated[int, PlainValidator(parse_size)]
 """Bytes."""
@@ -164,7 +174,12 @@ Identifier = Annotated[str, PlainValidator(identifier)]
 Topic = Annotated[str, PlainValidator(topic)]
 Pointer = Annotated[str, PlainValidator(pointer)]
 Rules = Annotated[
-    tuple[Annotated[tuple[Rule, float], PlainValidator(rule_of)], ...],
+    tuple[
+        Annotated[
+            tuple[Rule, float], PlainValidator(rule_of), PlainSerializer(rule_text, return_type=Any, when_used="json")
+        ],
+        ...,
+    ],
     BeforeValidator(rules_of),
     AfterValidator(each_once),
 ]

@@ -88,12 +88,17 @@ class Herald:
             for notice, point, recent in zip(notices, points, verdicts.recent, strict=True)
         ]
 
+    def signal_id(self, row: int, start: int, raised_number: int) -> str:
+        """Return the id of an episode: that of the event that raised it."""
+        characteristic = self._characteristics[row]
+        return event_id(characteristic.id, characteristic.baseline.version, start, raised_number, TYPES[Notice.RAISED])
+
     def _event(self, notice: dict[str, Any], point: dict[str, Any], recent: list[tuple[int, int, float]]) -> Event:
         kind, row = Notice(notice["kind"]), notice["row"]
         characteristic = self._characteristics[row]
         name, baseline = characteristic.id, characteristic.baseline.version
         start, raised_number = notice["start"], notice["raised_number"]
-        signal = event_id(name, baseline, start, raised_number, TYPES[Notice.RAISED])
+        signal = self.signal_id(row, start, raised_number)
         identity = signal
         if kind is not Notice.RAISED:
             identity = event_id(name, baseline, start, point["number"], TYPES[kind])
