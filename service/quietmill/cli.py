@@ -77,7 +77,7 @@ def run(config: Path) -> None:
     Example:   quietmill run config/minimal.yaml
     """
     from quietmill.logs import set_up_logs
-    from quietmill.monitor import StartError, run_service
+    from quietmill.monitor import ServiceError, StartError, run_service
 
     settings = read_settings(config)
     set_up_logs()
@@ -85,6 +85,9 @@ def run(config: Path) -> None:
         run_service(settings)
     except StartError as error:
         click.echo(f"quietmill did not start: {error}", err=True)
+        sys.exit(1)
+    except ServiceError as error:
+        click.echo(f"quietmill has stopped: {error}", err=True)
         sys.exit(1)
 
 

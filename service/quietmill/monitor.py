@@ -47,7 +47,7 @@ from quietmill.recovery import Recovered, recover
 from quietmill.settings import Settings
 from quietmill.signals.event import Event
 
-__all__ = ["Monitor", "StartError", "run_service"]
+__all__ = ["Monitor", "ServiceError", "StartError", "run_service"]
 
 log = structlog.get_logger("quietmill")
 
@@ -82,6 +82,10 @@ class Held(NamedTuple):
 
 class StartError(Exception):
     """The service could not start, for a reason that its user can mend."""
+
+
+class ServiceError(Exception):
+    """The service cannot go on, for a reason that its user can mend."""
 
 
 class Monitor:
@@ -156,6 +160,10 @@ class Monitor:
             raise StartError(f"record {self.settings.record}: {error}") from None
         for letter in self.record.letters():
             self.publisher.put(Letter(*letter))
+        if recovered.entries:
+            log.info(
+                "state recovered", journal_entries=recovered.entries, waiting_to_be_said=self.publisher.outstanding
+            )
         return recovered
 
     def start(self) -> None:
@@ -340,6 +348,7 @@ class Monitor:
             messages_qos0=self.connection.messages_qos0,
             connected=self.connection.connected,
             outbox=self.publisher.outstanding,
+            record_bytes=self.record.bytes if self.record is not None else 0,
         )
 
     def stop(self) -> None:
@@ -386,11 +395,14 @@ def stopped_by_signals(monitor: Monitor) -> Iterator[None]:
 
 
 def run_service(settings: Settings) -> None:
-    """Run the service until SIGTERM or SIGINT. Raises `StartError`."""
+    """Run the service until SIGTERM or SIGINT. Raises `StartError`, and `ServiceError` when it cannot go on."""
     sys.setswitchinterval(SWITCH_SECONDS)
     monitor = Monitor(settings)
     with stopped_by_signals(monitor):
         monitor.start()
-        while not monitor.stopping:
-            monitor.turn()
+        try:
+            while not monitor.stopping:
+                monitor.turn()
+        except RecordLostError as error:
+            raise ServiceError(f"{error}; it stops rather than write into the void") from None
         monitor.close()

@@ -34,6 +34,7 @@ OF_THE_SERVICE = {
     "quietmill_config_last_reload_successful",
     "quietmill_broker_connected",
     "quietmill_outbox_events",
+    "quietmill_journal_bytes",
     "quietmill_build_info",
 }
 

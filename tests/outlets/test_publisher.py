@@ -43,8 +43,8 @@ def no_long_waits(monkeypatch: pytest.MonkeyPatch) -> None:
 def test_documents_go_to_their_topics_as_what_they_are() -> None:
     link = Link()
     publisher = Publisher(link, "mill/a", "press-hall")
-    publisher.event("press1.force", b"raised")
-    publisher.status("press1.force", b"signal")
+    publisher.put(publisher.event_letter("press1.force", b"raised"))
+    publisher.put(publisher.status_letter("press1.force", b"signal"))
     publisher.turn()
     assert link.handed == [
         ("mill/a/service/press-hall", b'{"state":"online"}', True, "application/json"),
@@ -57,7 +57,7 @@ def test_no_more_than_a_window_is_handed_over_ahead_of_acknowledgements() -> Non
     link = Link(window=3)
     publisher = Publisher(link, "quietmill", "quietmill")
     for place in range(9):
-        publisher.event("press1.force", str(place).encode())
+        publisher.put(publisher.event_letter("press1.force", str(place).encode()))
     publisher.turn()
     assert link.payloads() == ["0", "1"]
     link.on_acknowledged(1)
@@ -70,7 +70,7 @@ def test_events_wait_while_there_is_no_connection() -> None:
     link = Link()
     link.connected = False
     publisher = Publisher(link, "quietmill", "quietmill")
-    publisher.event("press1.force", b"1")
+    publisher.put(publisher.event_letter("press1.force", b"1"))
     publisher.turn()
     assert (link.handed, publisher.outstanding) == ([], 1)
     link.connected = True
@@ -82,8 +82,8 @@ def test_a_retained_message_replaces_one_that_still_waits_and_events_never_do() 
     link = Link()
     publisher = Publisher(link, "quietmill", "quietmill")
     for word in (b"1", b"2"):
-        publisher.status("press1.force", word)
-        publisher.event("press1.force", word)
+        publisher.put(publisher.status_letter("press1.force", word))
+        publisher.put(publisher.event_letter("press1.force", word))
     publisher.turn()
     assert [(topic, payload) for topic, payload, _, _ in link.handed[1:]] == [
         (EVENTS, b"1"),
@@ -96,12 +96,12 @@ def test_too_many_events_fill_the_outbox_and_statuses_do_not() -> None:
     link = Link(window=1)
     publisher = Publisher(link, "quietmill", "quietmill")
     for number in range(OUTBOX_LIMIT + 1):
-        publisher.status(f"press{number}.force", b"in_control")
+        publisher.put(publisher.status_letter(f"press{number}.force", b"in_control"))
     assert not publisher.full
     for _ in range(OUTBOX_LIMIT):
-        publisher.event("press1.force", b"")
+        publisher.put(publisher.event_letter("press1.force", b""))
     assert not publisher.full
-    publisher.event("press1.force", b"")
+    publisher.put(publisher.event_letter("press1.force", b""))
     assert publisher.full
     for mid in range(publisher.outstanding + 1):
         publisher.turn()
@@ -133,7 +133,7 @@ def test_every_event_comes_once_and_in_order_on_one_connection(tmp_path: Path, v
     ):
         publisher = Publisher(link, "quietmill", "quietmill")
         for place in range(300):
-            publisher.event("press1.force", str(place).encode())
+            publisher.put(publisher.event_letter("press1.force", str(place).encode()))
         drive(link, lambda: publisher.turn() or not publisher.outstanding, "the outbox to empty")
         wait_for(lambda: len(peer.payloads(EVENTS)) >= 300, what="the events")
         assert peer.payloads(EVENTS) == [str(place).encode() for place in range(300)]
@@ -153,7 +153,7 @@ def test_no_event_is_lost_or_out_of_order_when_the_wire_is_cut_again_and_again(
     ):
         publisher = Publisher(link, "quietmill", "quietmill")
         for place in range(400):
-            publisher.event("press1.force", str(place).encode())
+            publisher.put(publisher.event_letter("press1.force", str(place).encode()))
         cuts = 0
 
         def turn() -> bool:
@@ -193,7 +193,7 @@ def test_a_broker_that_restarts_has_the_last_word_of_everything(tmp_path: Path) 
             broker.stop()
             drive(link, lambda: not link.connected)
             for word in (b"signal", b"in_control"):
-                publisher.status("press1.force", word)
+                publisher.put(publisher.status_letter("press1.force", word))
             broker.start()
             drive(link, lambda: publisher.turn() or not publisher.outstanding, "the outbox to empty")
             with Peer(broker.port, "quietmill/#") as late:
@@ -213,7 +213,7 @@ def test_the_content_type_arrives_with_an_event(tmp_path: Path) -> None:
         publisher = Publisher(link, "quietmill", "quietmill")
         listener = mqtt.Client(CallbackAPIVersion.VERSION2, protocol=mqtt.MQTTv5)
         listener.on_message = lambda _c, _d, message: seen.append(message.properties.ContentType)
-        listener.on_subscribe = lambda *_: publisher.event("press1.force", b"{}")
+        listener.on_subscribe = lambda *_: publisher.put(publisher.event_letter("press1.force", b"{}"))
         listener.connect("127.0.0.1", broker.port)
         listener.subscribe(EVENTS)
         drive(link, lambda: publisher.turn() or listener.loop(0.02) or seen, "the event")

@@ -66,7 +66,7 @@ def test_the_head_says_what_the_service_is_joined_to(loaded: Loaded) -> None:
     assert lines[:3] == [
         "broker     ws://[::1]:80/mqtt, MQTT 5, not encrypted, user line1",
         "session    mill, kept by the broker for 90s without the service",
-        "record     sqlite:a.db, but nothing is kept yet",
+        "record     sqlite:a.db: state and what is to be said; no history yet",
     ]
     assert lines[3:5] == [
         "web        http://127.0.0.1:8088/metrics, /healthz, /readyz",

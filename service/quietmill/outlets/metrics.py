@@ -89,6 +89,7 @@ class Copies:
     messages_qos0: int
     connected: bool
     outbox: int
+    record_bytes: int = 0
 
 
 SHOWN: Final[tuple[str, ...]] = ("number", "value", "ewma", "cusum_high", "cusum_low", "open", "accepted", "last_time")
@@ -126,6 +127,8 @@ class ServiceCollector(Collector):
         yield GaugeMetricFamily("quietmill_broker_connected", text, int(copies.connected))
         text = "Events, replies and status that the broker has not acknowledged yet."
         yield GaugeMetricFamily("quietmill_outbox_events", text, copies.outbox)
+        text = "Size of the record's file with its write-ahead log; 0 without a record."
+        yield GaugeMetricFamily("quietmill_journal_bytes", text, copies.record_bytes)
         text = "Whether the settings were taken over when they were last read."
         yield GaugeMetricFamily("quietmill_config_last_reload_successful", text, 1)
 

@@ -129,13 +129,9 @@ class Store:
         self.db.execute("BEGIN IMMEDIATE")
         try:
             yield self.db
-        except BaseException:
-            self.db.execute("ROLLBACK")
-            raise
-        try:
             self.db.execute("COMMIT")
-        except sqlite3.Error:
-            if self.db.in_transaction:
+        except BaseException:
+            if self.db.in_transaction:  # a full disk has rolled back already
                 self.db.execute("ROLLBACK")
             raise
         if checked and self._inode() != self._file:

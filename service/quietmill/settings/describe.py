@@ -15,6 +15,7 @@ from quietmill.settings.plant import Broker, Settings
 
 __all__ = ["SAFETY", "Description", "describe"]
 
+NO_RECORD: Final = "none: each start begins afresh"
 SAFETY: Final = (
     "quietmill informs people. It is no safety function: no interlock, trip or machine guard may depend on it, and "
     "before anyone touches a machine because of a signal, lock-out/tag-out and the site's own procedures come first."
@@ -113,7 +114,7 @@ def connections(settings: Settings) -> Iterator[tuple[str, str]]:
     yield "session", session_of(broker)
     yield (
         "record",
-        f"{printable(settings.record)}, but nothing is kept yet" if settings.record else "nothing is kept yet",
+        f"{printable(settings.record)}: state and what is to be said; no history yet" if settings.record else NO_RECORD,
     )
     yield "web", f"http://{settings.web.listen}/metrics, /healthz, /readyz"
     yield "publishes", f"below {prefix}/: signals, status, service; as source {settings.publish.source}"

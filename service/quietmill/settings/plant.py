@@ -191,7 +191,7 @@ def record_url_of(value: Any) -> Any:
 
 
 class Record(Form):
-    """Where the record will stand and how much of it is kept; nothing is kept yet."""
+    """Where the record stands, and how much history it will keep; none is kept yet."""
 
     url: Annotated[str, BeforeValidator(record_url_of)]
     keep: Duration | None = None
