@@ -1,0 +1,104 @@
+"""The service with its record: what happens when the file cannot be written, is held, or is gone."""
+
+import contextlib
+import sqlite3
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+
+from broker import Peer, running, wait_for
+from record.test_crash import service_with_record
+from test_end_to_end import live_events, messages, readings, replayed
+
+pytestmark = pytest.mark.broker
+
+
+def test_signals_and_numbers_go_on_after_a_stop_in_good_order(tmp_path: Path) -> None:
+    rows = readings(300)
+    sent = messages(rows)
+    with running(tmp_path) as broker, Peer(broker.port, "quietmill/#") as peer:
+        service = service_with_record(tmp_path, broker)
+        for part in range(3):
+            service.start()
+            peer.publish(*sent[len(sent) * part // 3 : len(sent) * (part + 1) // 3])
+            wait_for(lambda: service.metric("quietmill_outbox_events") == 0 and service.accepted() > 0, what="the part")
+            assert service.stop() == 0
+        expected = replayed(service, rows, tmp_path)
+        service.start()
+        wait_for(
+            lambda: {event["id"] for event in live_events(peer)} >= {event["id"] for event in expected},
+            what="all events",
+        )
+        service.stop()
+    assert {event["id"] for event in live_events(peer)} == {event["id"] for event in expected}
+
+
+def test_a_record_that_cannot_be_written_holds_readings_until_it_can(tmp_path: Path) -> None:
+    rows = readings(60)
+    with contextlib.ExitStack() as stack:
+        broker = stack.enter_context(running(tmp_path))
+        peer = stack.enter_context(Peer(broker.port, "quietmill/#"))
+        with service_with_record(tmp_path, broker) as service:
+            holder = sqlite3.connect(tmp_path / "quietmill.db", isolation_level=None)
+            holder.execute("BEGIN IMMEDIATE")
+            peer.publish(*messages(rows))
+            wait_for(lambda: "another program holds the file" in service.get("/readyz")[1], what="the reason")
+            assert service.accepted() == 0
+            holder.execute("ROLLBACK")
+            holder.close()
+            wait_for(lambda: service.accepted() == len(rows), what="all readings")
+            wait_for(lambda: service.get("/readyz")[0] == 200, what="the service to be ready")
+            expected = {event["id"] for event in replayed(service, rows, tmp_path)}
+            wait_for(lambda: {event["id"] for event in live_events(peer)} >= expected, what="all events")
+            assert service.stop() == 0
+    assert [entry["reason"] for entry in service.log() if entry["event"] == "the record cannot be written"] == [
+        "cannot be written: another program holds the file"
+    ]
+
+
+def test_a_record_that_is_deleted_stops_the_service_before_it_acknowledges(tmp_path: Path) -> None:
+    with running(tmp_path) as broker, Peer(broker.port) as peer:
+        service = service_with_record(tmp_path, broker).start()
+        process = service.process
+        (tmp_path / "quietmill.db").unlink()
+        peer.publish(("tiles/press/1", '{"force": 240, "mm": 8.7, "at": "2026-03-02T06:00:00Z"}'))
+        assert process is not None
+        assert process.wait(30) == 1
+        service.process = None
+        assert "was deleted or replaced while the service ran" in service.log_file.read_text()
+        assert "Traceback" not in service.log_file.read_text()
+        with service_with_record(tmp_path, broker) as again:
+            wait_for(lambda: again.accepted() == 2, what="the message, which was not acknowledged")
+
+
+def test_two_services_cannot_share_a_record(tmp_path: Path) -> None:
+    with running(tmp_path) as broker, service_with_record(tmp_path, broker) as service:
+        second = subprocess.run(
+            [sys.executable, "-m", "quietmill", "run", str(service.config)],
+            capture_output=True,
+            text=True,
+            timeout=60,
+            check=False,
+        )
+    assert second.returncode == 1
+    assert "another running service holds it" in second.stderr
+    assert "Traceback" not in second.stderr
+
+
+def test_an_edited_settings_file_is_taken_over_at_the_next_start(tmp_path: Path) -> None:
+    with running(tmp_path) as broker, Peer(broker.port, "quietmill/#") as peer:
+        service = service_with_record(tmp_path, broker).start()
+        peer.publish(("tiles/press/1", '{"force": 260, "mm": 8.7, "at": "2026-03-02T06:00:00Z"}'))
+        wait_for(lambda: len(live_events(peer)) == 1, what="the signal")
+        service.stop()
+        service.config.write_text(service.config.read_text().replace("centre: 240, sigma: 2", "centre: 240, sigma: 3"))
+        service.start()
+        wait_for(lambda: len(live_events(peer)) == 2, what="the end of the episode")
+        returned = live_events(peer)[1]
+        assert (returned["type"], returned["data"]["ended"]) == ("quietmill.signal.returned", "reload")
+        peer.publish(("tiles/press/1", '{"force": 270, "mm": 8.7, "at": "2026-03-02T06:00:10Z"}'))
+        wait_for(lambda: len(live_events(peer)) == 3, what="the next signal")
+        assert live_events(peer)[2]["data"]["point"]["number"] == 2
+        service.stop()
