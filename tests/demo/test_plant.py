@@ -6,7 +6,7 @@ import pytest
 
 from quietmill.demo.faults import FAIR_START, Fault, plant_faults
 from quietmill.demo.plant import Plant
-from quietmill.demo.run import settings_file
+from quietmill.demo.service import settings_file
 from quietmill.intake.message import Message
 from quietmill.intake.routes import Routes
 from quietmill.settings import Characteristic, load

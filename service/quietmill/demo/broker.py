@@ -2,6 +2,7 @@
 
 import contextlib
 import ctypes
+import os
 import shutil
 import signal
 import socket
@@ -12,9 +13,10 @@ from importlib import import_module
 from pathlib import Path
 from typing import Final
 
-__all__ = ["DemoError", "die_with_parent", "free_port", "start_broker"]
+__all__ = ["DemoError", "die_with_parent", "end", "free_port", "start_broker"]
 
 START_SECONDS: Final = 10.0
+END_SECONDS: Final = 10.0
 PR_SET_PDEATHSIG: Final = 1
 
 EMBEDDED: Final = """id = 0
@@ -39,10 +41,27 @@ class DemoError(Exception):
     """The demo cannot go on; the message says why and what to do."""
 
 
+try:
+    # Looked up here, since a child between fork and exec had better load nothing.
+    PRCTL = ctypes.CDLL(None).prctl
+except (OSError, AttributeError):
+    PRCTL = None
+
+
 def die_with_parent() -> None:
     """Ask the system to end this child process when its parent is gone, however that ended (Linux)."""
-    with contextlib.suppress(OSError, AttributeError):
-        ctypes.CDLL(None).prctl(PR_SET_PDEATHSIG, signal.SIGTERM)
+    if PRCTL is not None:
+        PRCTL(PR_SET_PDEATHSIG, signal.SIGTERM)
+
+
+def end(process: subprocess.Popen[bytes]) -> None:
+    """End a child process: by asking, and if it will not hear, by force."""
+    process.terminate()
+    try:
+        process.wait(END_SECONDS)
+    except subprocess.TimeoutExpired:
+        process.kill()
+        process.wait()
 
 
 def free_port() -> int:
@@ -54,8 +73,8 @@ def free_port() -> int:
 
 def wait_until_it_listens(port: int, process: subprocess.Popen[bytes] | None, log: Path) -> None:
     """Return when somebody listens on a port. Raises `DemoError`."""
-    end = time.monotonic() + START_SECONDS
-    while time.monotonic() < end:
+    deadline = time.monotonic() + START_SECONDS
+    while time.monotonic() < deadline:
         if process is not None and process.poll() is not None:
             break
         with contextlib.suppress(OSError), socket.create_connection(("127.0.0.1", port), 1):
@@ -69,9 +88,11 @@ def wait_until_it_listens(port: int, process: subprocess.Popen[bytes] | None, lo
 def mosquitto(program: str, folder: Path, port: int) -> Generator[None]:
     """Run Mosquitto as a child."""
     config, log = folder / "mosquitto.conf", folder / "mosquitto.log"
-    config.write_text(
-        f"listener {port} 127.0.0.1\nallow_anonymous true\npersistence false\nmax_queued_messages 100000\n"
-    )
+    lines = [f"listener {port} 127.0.0.1", "allow_anonymous true", "persistence false", "max_queued_messages 100000"]
+    if os.geteuid() == 0:
+        # Else it changes its user, and the system forgets that it is to die with its parent.
+        lines.append("user root")
+    config.write_text("\n".join([*lines, ""]))
     with log.open("wb") as output:
         process = subprocess.Popen(  # noqa: S603  the program was found on the PATH
             [program, "-c", str(config)],
@@ -79,14 +100,13 @@ def mosquitto(program: str, folder: Path, port: int) -> Generator[None]:
             stdout=output,
             stderr=output,
             start_new_session=True,
-            preexec_fn=die_with_parent,  # noqa: PLW1509  no thread runs yet
+            preexec_fn=die_with_parent,  # noqa: PLW1509  it only asks the system a favour
         )
     try:
         wait_until_it_listens(port, process, log)
         yield
     finally:
-        process.terminate()
-        process.wait(10)
+        end(process)
 
 
 @contextlib.contextmanager
@@ -100,12 +120,13 @@ def embedded(folder: Path, port: int) -> Generator[None]:
         ) from None
     config = folder / "broker.toml"
     config.write_text(EMBEDDED.format(port=port))
-    try:
-        with iotcore.Broker(config_path=str(config)):
-            wait_until_it_listens(port, None, folder / "none")
-            yield
-    except (OSError, RuntimeError) as error:
-        raise DemoError(f"the broker did not start: {error}") from None
+    with contextlib.ExitStack() as stack:
+        try:
+            stack.enter_context(iotcore.Broker(config_path=str(config)))
+        except (OSError, RuntimeError) as error:
+            raise DemoError(f"the broker did not start: {error}") from None
+        wait_until_it_listens(port, None, folder / "none")
+        yield
 
 
 @contextlib.contextmanager

@@ -17,6 +17,8 @@ LATEST_START: Final = 130
 DRIFT_POINTS: Final = 60
 """A drift has reached its full size after so many points, and stays there."""
 CYCLE_POINTS: Final = 30
+SPIKE_ECHO: Final = 20
+"""So many points after a spike a sum may still carry it; what is said later is said of something else."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -44,6 +46,14 @@ class Fault:
                 return z + self.size if age == 0 else z
             case _:
                 return z + self.size
+
+    def explains(self, number: int) -> bool:
+        """Return whether a signal at a point (from 1) can be due to this fault.
+
+        >>> [Fault("spike", 60, 6.0).explains(number) for number in (60, 61, 200)]
+        [False, True, False]
+        """
+        return number > self.begin and (self.kind != "spike" or number <= self.begin + 1 + SPIKE_ECHO)
 
     @property
     def in_words(self) -> str:
@@ -82,8 +92,8 @@ def sizes(kind: str, stream: Random) -> float:
 def plant_faults(characteristics: Sequence[Characteristic], seed: int) -> Mapping[int, Fault]:
     """Return a fault for each of some characteristics, by row; the same seed gives the same faults.
 
-    Every kind is there: a stuck sensor where a rule can see it, good news where a direction is favourable; where only
-    one side may signal, the fault goes there.
+    Every kind is there: a stuck sensor and a spike where a rule can see them, good news where a direction is
+    favourable; where only one side may signal, the fault goes there.
     """
     stream = Random(seed)
     rows = range(len(characteristics))
@@ -98,8 +108,11 @@ def plant_faults(characteristics: Sequence[Characteristic], seed: int) -> Mappin
         plant(row, "stuck", sizes("stuck", stream))
     for row in stream.sample(better, min(1, len(better))):
         plant(row, "better", stream.uniform(1.0, 1.75) * (1 if characteristics[row].favourable == "high" else -1))
-    kinds = ["step"] * 5 + ["drift"] * 2 + ["cycle"] + ["spike"] * 2
-    for row, kind in zip(stream.sample([row for row in rows if row not in faults], len(kinds)), kinds, strict=True):
+    limited = [row for row in rows if row not in faults and Rule.BEYOND_LIMITS in characteristics[row].detector.rules]
+    spikes = dict.fromkeys(stream.sample(limited, min(2, len(limited))), "spike")
+    untouched = [row for row in rows if row not in faults and row not in spikes]
+    others = ["step"] * 5 + ["drift"] * 2 + ["cycle"]
+    for row, kind in [*spikes.items(), *zip(stream.sample(untouched, len(others)), others, strict=True)]:
         size, side = sizes(kind, stream), characteristics[row].detector.side
         if kind != "cycle" and side != "both":
             size = abs(size) if side == "high" else -abs(size)

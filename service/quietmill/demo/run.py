@@ -1,224 +1,185 @@
 """The demo: a broker, the simulated plant, the real service in its own process, and the scorecard."""
 
 import contextlib
-import json
-import re
 import signal
-import subprocess
 import sys
 import threading
 import time
-import urllib.request
-from collections.abc import Generator
+from collections.abc import Callable, Generator
 from pathlib import Path
-from queue import Empty, SimpleQueue
 from tempfile import TemporaryDirectory
-from typing import Any, Final
+from typing import Final
 
-from paho.mqtt import client as mqtt
-from paho.mqtt.enums import CallbackAPIVersion
 from rich.console import Console
 from rich.text import Text
 
-from quietmill.demo.broker import DemoError, die_with_parent, free_port, start_broker
+from quietmill.demo.broker import DemoError, free_port, start_broker
 from quietmill.demo.faults import plant_faults
 from quietmill.demo.plant import Plant
 from quietmill.demo.scorecard import Scorecard
-from quietmill.settings import Settings, load
+from quietmill.demo.service import Service, adapted_settings, start_service
+from quietmill.demo.watcher import Heard, Watcher
+from quietmill.settings import Settings
 from quietmill.settings.describe import SAFETY
 
-__all__ = ["run_demo", "settings_file"]
+__all__ = ["run_demo"]
 
 INTERVAL: Final = 60_000_000
 """Simulated microseconds between two readings of a characteristic: a minute."""
-HEAD_START: Final = 30 * 86_400_000_000
-"""How far in the past simulated time begins."""
+DAY: Final = 86_400_000_000
+SHORTEST_PAST: Final = 30 * DAY
+LONGEST_PAST: Final = 20 * 365 * DAY
 START_SECONDS: Final = 60.0
 """The first start compiles."""
 SETTLE_SECONDS: Final = 10.0
-PLACES: Final = (
-    Path(__file__).parents[3] / "config" / "tileworks.yaml",
-    Path(sys.prefix) / "share" / "quietmill" / "tileworks.yaml",
-)
+WAIT_SECONDS: Final = 0.05
+STYLES: Final = {"raised": "bold yellow", "joined": "yellow", "returned": "dim"}
+GOOD_NEWS: Final = "bold green"
 
 
-def settings_file() -> Path:
-    """Return where the settings of the tile works stand: in the clone, or where the package was installed."""
-    for place in PLACES:
-        if place.is_file():
-            return place
-    raise DemoError("config/tileworks.yaml is missing: run the demo from a clone, or install the package again")
+def now_us() -> int:
+    """Return the present in microseconds UTC."""
+    return time.time_ns() // 1000
 
 
-def adapted(folder: Path, broker_port: int, web_port: int) -> Path:
-    """Write the plant's settings with the addresses of this run."""
-    text = settings_file().read_text(encoding="utf-8")
-    text = re.sub(r"mqtt://127\.0\.0\.1:\d+", f"mqtt://127.0.0.1:{broker_port}", text)
-    text = re.sub(r"listen: 127\.0\.0\.1:\d+", f"listen: 127.0.0.1:{web_port}", text)
-    path = folder / "tileworks.yaml"
-    path.write_text(text, encoding="utf-8")
-    return path
-
-
-class Watcher:
-    """The plant's own client on the broker: it publishes readings and hears what the service says."""
-
-    def __init__(self, settings: Settings) -> None:
-        self.settings = settings
-        self.heard: SimpleQueue[tuple[str, bytes]] = SimpleQueue()
-        self.sent = 0
-        self.client = mqtt.Client(CallbackAPIVersion.VERSION2, client_id="tileworks-plant", protocol=mqtt.MQTTv5)
-        self.client.on_message = lambda _client, _data, message: self.heard.put((message.topic, bytes(message.payload)))
-        self.client.connect(settings.broker.host, settings.broker.port)
-        prefix = settings.publish.prefix
-        self.client.subscribe([(f"{prefix}/signals/+", 1), (f"{prefix}/service/+", 1)])
-        self.client.loop_start()
-
-    def publish(self, messages: list[tuple[str, bytes]]) -> None:
-        """Send readings with QoS 1."""
-        for topic, payload in messages:
-            self.client.publish(topic, payload, qos=1)
-        self.sent += len(messages)
-
-    def hear(self, seconds: float) -> tuple[str, dict[str, Any]] | None:
-        """Return the next document that the service published, waiting at most so long."""
-        try:
-            topic, payload = self.heard.get(timeout=max(seconds, 0.001))
-        except Empty:
-            return None
-        return topic, json.loads(payload)
-
-    def close(self) -> None:
-        """Leave the broker."""
-        self.client.disconnect()
-        self.client.loop_stop()
-
-
-@contextlib.contextmanager
-def service(config: Path, log: Path) -> Generator[subprocess.Popen[bytes]]:
-    """Run the service as its own process, its log in a file."""
-    with log.open("wb") as output:
-        process = subprocess.Popen(  # noqa: S603  ourselves
-            [sys.executable, "-m", "quietmill", "run", str(config)],
-            stdin=subprocess.DEVNULL,
-            stdout=output,
-            stderr=output,
-            start_new_session=True,
-            preexec_fn=die_with_parent,  # noqa: PLW1509  it only asks the system a favour
-        )
-    try:
-        yield process
-    finally:
-        process.terminate()
-        try:
-            process.wait(10)
-        except subprocess.TimeoutExpired:
-            process.kill()
-            process.wait()
+def past_us(duration_seconds: float | None, pace: float) -> int:
+    """Return how far in the past simulated time must begin so as not to catch up with now: for a day without an end."""
+    needed = int((duration_seconds or 86_400) * pace) * INTERVAL
+    return min(max(SHORTEST_PAST, 2 * needed), LONGEST_PAST)
 
 
 class Demo:
     """One run of the demo, from the first reading to the scorecard."""
 
-    def __init__(self, console: Console, settings: Settings, watcher: Watcher, seed: int) -> None:
+    def __init__(self, console: Console, settings: Settings, seed: int, begin: int) -> None:
         characteristics = settings.characteristics
         faults = plant_faults(characteristics, seed)
-        begin = (time.time_ns() // 1000 - HEAD_START) // INTERVAL * INTERVAL
         self.console = console
         self.settings = settings
-        self.watcher = watcher
         self.plant = Plant(characteristics, faults, seed, begin, INTERVAL)
         self.scorecard = Scorecard([characteristic.id for characteristic in characteristics], faults)
+        self._told: set[str] = set()
 
-    def wait_for_service(self, process: subprocess.Popen[bytes], log: Path) -> None:
-        """Return when the service is online. Raises `DemoError`."""
+    def wait_for_service(self, watcher: Watcher, service: Service, stop: threading.Event) -> None:
+        """Return when the service is online, or a person has had enough. Raises `DemoError`."""
         end = time.monotonic() + START_SECONDS
-        while time.monotonic() < end:
-            heard = self.watcher.hear(0.1)
-            if heard is not None and heard[1].get("state") == "online":
+        while time.monotonic() < end and not stop.is_set():
+            heard = watcher.hear(WAIT_SECONDS)
+            if heard is not None and watcher.is_online(heard):
                 return
-            self.look_after(process, log)
-        raise DemoError(f"the service was not online after {START_SECONDS:g} s:\n{tail(log)}")
+            service.look_after()
+            watcher.look_after()
+        if not stop.is_set():
+            log = service.last_lines()
+            raise DemoError(f"the service was not online after {START_SECONDS:g} s; its log ended with:\n{log}")
 
-    @staticmethod
-    def look_after(process: subprocess.Popen[bytes], log: Path) -> None:
-        """Raise `DemoError` when the service has ended by itself."""
-        if process.poll() is not None:
-            raise DemoError(f"the service ended with {process.returncode}:\n{tail(log)}")
+    def go(
+        self, watcher: Watcher, service: Service, duration_seconds: float | None, pace: float, stop: threading.Event
+    ) -> None:
+        """Run the plant; tell each signal as it comes. Simulated time never overtakes now. Raises `DemoError`."""
+        begin = due = time.monotonic()
+        with self.progress() as show:
+            while not stop.is_set() and (duration_seconds is None or time.monotonic() < begin + duration_seconds):
+                now = time.monotonic()
+                wait = due - now
+                if wait <= 0 and not watcher.full and self.plant.time <= now_us():
+                    watcher.publish(self.plant.step())
+                    # A plant that was held up makes good for a second at most.
+                    due = max(due + 1 / pace, now - 1)
+                    wait = due - now
+                    show(f"point {self.plant.steps:,} of each, {self.plant.sent:,} readings")
+                elif wait <= 0:
+                    wait = WAIT_SECONDS
+                self.tell(watcher.hear(min(wait, WAIT_SECONDS)))
+                service.look_after()
+                watcher.look_after()
 
-    def go(self, duration_seconds: float | None, pace: float, stop: threading.Event, check: Any) -> None:
-        """Run the plant; tell each signal as it comes. Simulated time never overtakes now."""
-        begin = time.monotonic()
-        due = begin
-        while not stop.is_set():
-            now = time.monotonic()
-            if duration_seconds is not None and now - begin >= duration_seconds:
-                return
-            if now >= due and self.plant.time <= time.time_ns() // 1000:
-                self.watcher.publish(self.plant.step())
-                due = max(due + 1 / pace, now - 1)
-            self.tell(self.watcher.hear(min(due - time.monotonic(), 0.1)))
-            check()
-
-    def settle(self) -> None:
-        """Wait until the service has judged what was sent, and said what it has to say."""
+    def settle(self, watcher: Watcher, service: Service) -> None:
+        """Wait until the service has judged what was sent, and what it had to say has come. Raises `DemoError`."""
         end = time.monotonic() + SETTLE_SECONDS
-        expected = self.plant.steps * len(self.settings.characteristics)
-        accepted = 0
+        judged, waiting = service.progress()
+        while (judged < self.plant.sent or waiting) and time.monotonic() < end:
+            self.tell(watcher.hear(WAIT_SECONDS))
+            service.look_after()
+            watcher.look_after()
+            judged, waiting = service.progress()
+        watcher.say_last()
+        end = time.monotonic() + SETTLE_SECONDS
         while time.monotonic() < end:
-            heard = self.watcher.hear(0.1)
+            heard = watcher.hear(WAIT_SECONDS)
+            if heard is not None and watcher.is_last(heard):
+                break
             self.tell(heard)
-            if heard is None and accepted and self.accepted() == accepted:
-                return
-            accepted = self.accepted()
-            if accepted >= expected and heard is None:
-                return
+        if judged < self.plant.sent:
+            missing = self.plant.sent - judged
+            self.console.print(f"{missing:,} readings were still under way when the demo ended.", style="yellow")
 
-    def accepted(self) -> int:
-        """Return how many readings the service has accepted, from its metrics; 0 when it does not answer."""
-        with contextlib.suppress(OSError), urllib.request.urlopen(self.metrics, timeout=2) as answer:  # noqa: S310  our own address
-            for line in answer.read().decode().splitlines():
-                if line.startswith('quietmill_readings_total{outcome="accepted"}'):
-                    return int(float(line.split()[-1]))
-        return 0
-
-    @property
-    def metrics(self) -> str:
-        """The address of the service's metrics."""
-        return f"http://{self.settings.web.listen}/metrics"
-
-    def tell(self, heard: tuple[str, dict[str, Any]] | None) -> None:
-        """Print the sentence of an event, and put a raised one on the scorecard."""
-        if heard is None or "/signals/" not in heard[0]:
+    def tell(self, heard: Heard | None) -> None:
+        """Print the sentence of an event, and put a raised one on the scorecard; events may come twice."""
+        if heard is None or "data" not in heard.document or heard.document["id"] in self._told:
             return
-        event, data = heard[1], heard[1]["data"]
-        when = event["time"][5:16].replace("T", " ")
-        kind = event["type"].rsplit(".", 1)[1]
-        style = {"raised": "bold green" if data["favourable"] else "bold yellow"}.get(kind, "dim")
-        self.console.print(Text(f"{when}  {data['summary']}", style=style))
+        event, data = heard.document, heard.document["data"]
+        self._told.add(event["id"])
+        kind = event["type"].rpartition(".")[2]
+        style = GOOD_NEWS if data["favourable"] and kind == "raised" else STYLES.get(kind, "")
+        when = event["time"][:16].replace("T", " ")
+        self.console.print(Text.assemble((when, "dim"), "  ", (data["summary"], style)))
         if kind == "raised":
             self.scorecard.raised(data["characteristic"], data["point"]["number"])
 
-    def farewell(self) -> None:
+    @contextlib.contextmanager
+    def progress(self) -> Generator[Callable[[str], None]]:
+        """Show on a terminal, and only there, how far the plant is; yields what takes the text."""
+        if not self.console.is_terminal:
+            yield lambda _text: None
+            return
+        with self.console.status("") as status:
+            yield lambda text: status.update(f"[dim]{text}[/]")
+
+    def greet(self, broker: str, pace: float, seed: int) -> None:
+        """Say what is going to happen."""
+        count, faults = len(self.settings.characteristics), len(self.scorecard.faults)
+        self.console.print(
+            f"A tile works of {count} characteristics on {broker}: a reading a minute each, "
+            f"{pace * INTERVAL / 1e6:g} times as fast as real."
+        )
+        self.console.print(f"{faults} faults are planted in it (seed {seed}). The service does not know of them.")
+
+    def addresses(self, service: Service) -> None:
+        """Print where the running demo can be looked at."""
+        prefix, port = self.settings.publish.prefix, self.settings.broker.port
+        listen = f"mosquitto_sub -V 5 -h 127.0.0.1 -p {port}"
+        self.console.print(f"  metrics   {service.metrics_address}")
+        self.console.print(f"  signals   {listen} -t '{prefix}/signals/+' -v")
+        self.console.print(f"  status    {listen} -t '{prefix}/status/+' -v")
+
+    def farewell(self, service: Service) -> None:
         """Print the scorecard and where to look next."""
-        publish, broker = self.settings.publish, self.settings.broker
         console = self.console
         console.print()
-        console.print(self.scorecard.report(self.plant.steps))
+        if self.plant.steps:
+            console.print(self.scorecard.report(self.plant.steps))
+        else:
+            console.print("Stopped before the first reading.")
         console.print()
-        console.print("[bold]Where to look next[/], while a demo runs:")
-        console.print(f"  metrics   {self.metrics}")
-        console.print(f"  signals   mosquitto_sub -h 127.0.0.1 -p {broker.port} -t '{publish.prefix}/signals/+' -v")
-        console.print(f"  status    mosquitto_sub -h 127.0.0.1 -p {broker.port} -t '{publish.prefix}/status/+' -v")
+        console.print("[bold]Where to look next[/], while a demo runs (each prints its own ports at the start):")
+        self.addresses(service)
         console.print("[bold]Your own plant[/]: write a settings file like config/minimal.yaml, then")
         console.print("  quietmill check plant.yaml && quietmill run plant.yaml")
         console.print()
         console.print(Text(SAFETY, style="dim"))
 
 
-def tail(log: Path) -> str:
-    """Return the last lines of a log."""
-    return "\n".join(log.read_text(errors="replace").splitlines()[-10:]) or "(its log is empty)"
+@contextlib.contextmanager
+def stopped_by_signals() -> Generator[threading.Event]:
+    """Yield what is set by Ctrl-C and SIGTERM, so that a demo ends in good order."""
+    stop = threading.Event()
+    before = {number: signal.signal(number, lambda *_: stop.set()) for number in (signal.SIGINT, signal.SIGTERM)}
+    try:
+        yield stop
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, handler)
 
 
 def run_demo(duration_seconds: float | None, pace: float, seed: int) -> int:
@@ -227,31 +188,26 @@ def run_demo(duration_seconds: float | None, pace: float, seed: int) -> int:
     `pace` is points a second of each characteristic.
     """
     console = Console(highlight=False, soft_wrap=not sys.stdout.isatty())
-    stop = threading.Event()
-    before = {number: signal.signal(number, lambda *_: stop.set()) for number in (signal.SIGINT, signal.SIGTERM)}
     try:
-        with TemporaryDirectory(prefix="quietmill-demo-") as name, contextlib.ExitStack() as stack:
-            folder = Path(name)
+        with contextlib.ExitStack() as stack:
+            stop = stack.enter_context(stopped_by_signals())
+            folder = Path(stack.enter_context(TemporaryDirectory(prefix="quietmill-demo-")))
             broker, port = stack.enter_context(start_broker(folder))
-            config, log = adapted(folder, port, free_port()), folder / "service.log"
-            settings = load(config)
+            settings = adapted_settings(folder, port, free_port())
+            demo = Demo(console, settings, seed, (now_us() - past_us(duration_seconds, pace)) // INTERVAL * INTERVAL)
+            demo.greet(broker, pace, seed)
+            service = stack.enter_context(start_service(settings, folder / "service.log"))
             watcher = Watcher(settings)
             stack.callback(watcher.close)
-            console.print(
-                f"A tile works of {len(settings.characteristics)} characteristics on {broker}, port {port}; "
-                f"a reading a minute each, {pace * 60:g} times as fast as real. Ctrl-C ends it."
-            )
-            process = stack.enter_context(service(config, log))
-            demo = Demo(console, settings, watcher, seed)
-            demo.wait_for_service(process, log)
-            console.print(f"The service is online; {demo.metrics}\n", style="dim")
-            demo.go(duration_seconds, pace, stop, lambda: demo.look_after(process, log))
-            demo.settle()
-            demo.farewell()
+            demo.wait_for_service(watcher, service, stop)
+            if not stop.is_set():
+                console.print("The service is online. Ctrl-C ends the demo.")
+                demo.addresses(service)
+                console.print()
+                demo.go(watcher, service, duration_seconds, pace, stop)
+                demo.settle(watcher, service)
+            demo.farewell(service)
     except DemoError as error:
-        Console(stderr=True, highlight=False).print(Text(str(error)))
+        Console(stderr=True, highlight=False, soft_wrap=True).print(Text(str(error)))
         return 1
-    finally:
-        for number, handler in before.items():
-            signal.signal(number, handler)
     return 0

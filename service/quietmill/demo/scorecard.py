@@ -16,7 +16,8 @@ __all__ = ["Scorecard"]
 class Scorecard:
     """Sets raised signals against planted faults; the faults' truth stays here, the service never sees it.
 
-    A signal before its fault, or on a characteristic without one, is false. Each fault counts once.
+    A signal that no fault explains is false: before its fault, long after a spike, or where none is. Each fault
+    counts once.
     """
 
     ids: Sequence[str]
@@ -29,7 +30,7 @@ class Scorecard:
         """Take a raised signal at a characteristic's point `number` (from 1)."""
         row = self.ids.index(characteristic)
         fault = self.faults.get(row)
-        if fault is None or number <= fault.begin:
+        if fault is None or not fault.explains(number):
             self.false.append(characteristic)
         else:
             self.found.setdefault(row, number - fault.begin)
@@ -52,12 +53,21 @@ class Scorecard:
                 verdict = Text(f"not in {steps - fault.begin} points", style="yellow")
             begun += steps > fault.begin
             table.add_row(fault.in_words, self.ids[row], str(fault.begin + 1), verdict)
-        watched = steps * len(self.ids)
+        return Group(table, Text(), Text(self._total(begun, steps), style="bold"))
+
+    def _total(self, begun: int, steps: int) -> str:
+        """Return the result in a sentence."""
         false = len(self.false)
         where = f" ({', '.join(sorted(set(self.false)))})" if false else ""
-        total = Text(
-            f"{len(self.found)} of {begun} faults that have begun were found; "
-            f"{false} false signal{'s' * (false != 1)}{where} in {watched:,} points of {len(self.ids)} characteristics",
-            style="bold",
-        )
-        return Group(table, Text(), total)
+        said = f"{false} false signal{'s' * (false != 1)}{where} in {self._undisturbed(steps):,} points without a fault"
+        if begun:
+            return f"{len(self.found)} of {begun} faults that have begun were found; {said}."
+        first = min((fault.begin for fault in self.faults.values()), default=0) + 1
+        return f"No planted fault has begun; {said}. The first begins at point {first}: let the demo run longer."
+
+    def _undisturbed(self, steps: int) -> int:
+        """Return at how many points of all characteristics a signal would be false."""
+        count = steps * len(self.ids)
+        for fault in self.faults.values():
+            count -= sum(fault.explains(number) for number in range(fault.begin + 1, steps + 1))
+        return count
