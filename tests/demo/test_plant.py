@@ -1,5 +1,4 @@
 import statistics
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -9,6 +8,7 @@ from quietmill.demo.plant import Plant
 from quietmill.demo.service import settings_file
 from quietmill.intake.message import Message
 from quietmill.intake.routes import Routes
+from quietmill.model import Rule
 from quietmill.settings import Characteristic, load
 
 BEGIN = 1_772_409_600_000_000
@@ -45,6 +45,32 @@ def test_every_characteristic_is_read_once_a_step_from_its_own_payload(character
         assert readings["time"][readings["row"] == row].tolist() == [BEGIN + MINUTE * step for step in range(30)]
 
 
+def test_every_payload_carries_what_was_measured(characteristics) -> None:
+    plain = [each.model_copy(update={"payload": None, "topic": each.id}) for each in characteristics]
+    sent, measured = decoded(characteristics, messages(characteristics, 5, 30)), decoded(plain, messages(plain, 5, 30))
+    for row in range(len(characteristics)):
+        values = measured["value"][measured["row"] == row]
+        assert sent["value"][sent["row"] == row] == pytest.approx(values, rel=1e-12)
+        assert len(set(values.tolist())) > 10
+
+
+def test_what_a_machine_gathers_for_a_list_is_not_counted_as_sent(characteristics) -> None:
+    plant = Plant(characteristics, {}, 5, BEGIN, MINUTE)
+    for _ in range(5):
+        so_far = plant.step()
+        assert so_far
+    assert plant.sent == len(decoded(characteristics, messages(characteristics, 5, 5)))
+    assert plant.sent < 5 * len(characteristics)
+
+
+def test_a_machine_with_a_counter_counts_its_messages(characteristics) -> None:
+    readings = decoded(characteristics, messages(characteristics, 5, 6))
+    counting = [row for row, characteristic in enumerate(characteristics) if characteristic.detector.sequenced]
+    assert counting
+    for row in counting:
+        assert readings["sequence"][readings["row"] == row].tolist() == list(range(6))
+
+
 def test_readings_in_control_have_the_centre_and_sigma_of_the_settings(characteristics) -> None:
     readings = decoded(characteristics, messages(characteristics, 5, 600))
     for row, characteristic in enumerate(characteristics):
@@ -79,10 +105,7 @@ def test_faults_are_fair(characteristics, seed: int) -> None:
     for row, fault in faults.items():
         assert fault.begin >= FAIR_START
         assert fault.kind == "spike" or abs(fault.size) <= 2
-        side = characteristics[row].detector.side
+        side, rules = characteristics[row].detector.side, characteristics[row].detector.rules
+        assert fault.kind != "stuck" or Rule.STRATIFICATION in rules
+        assert fault.kind != "spike" or Rule.BEYOND_LIMITS in rules
         assert fault.kind == "cycle" or side == "both" or (fault.size > 0) == (side == "high")
-
-
-def test_the_settings_of_the_plant_are_found() -> None:
-    assert settings_file().name == "tileworks.yaml"
-    assert Path(settings_file()).is_file()

@@ -41,3 +41,21 @@ def test_a_fault_that_has_not_begun_is_not_held_against_the_detector() -> None:
     assert "not yet begun" in said
     assert "not in 10 points" in said
     assert "0 of 1 faults that have begun were found" in said
+
+
+def test_a_signal_long_after_a_spike_is_false() -> None:
+    card = scorecard()
+    card.raised("kiln1.oxygen", 200)
+    assert card.found == {}
+    assert card.false == ["kiln1.oxygen"]
+
+
+def test_points_without_a_fault_are_those_at_which_a_signal_would_be_false() -> None:
+    # 60 and 90 before the faults, 19 after the spike's echo of 21 points, 130 on the third.
+    assert "in 299 points without a fault" in text(scorecard(), 130)
+
+
+def test_a_run_that_was_too_short_says_so() -> None:
+    said = text(scorecard(), 40)
+    assert "No planted fault has begun" in said
+    assert "begins at point 61" in said

@@ -29,6 +29,7 @@ INTERVAL: Final = 60_000_000
 DAY: Final = 86_400_000_000
 SHORTEST_PAST: Final = 30 * DAY
 LONGEST_PAST: Final = 20 * 365 * DAY
+SHIFT_SECONDS: Final = 8 * 3600.0
 START_SECONDS: Final = 60.0
 """The first start compiles."""
 SETTLE_SECONDS: Final = 10.0
@@ -43,9 +44,12 @@ def now_us() -> int:
 
 
 def past_us(duration_seconds: float | None, pace: float) -> int:
-    """Return how far in the past simulated time must begin so as not to catch up with now: for a day without an end."""
-    needed = int((duration_seconds or 86_400) * pace) * INTERVAL
-    return min(max(SHORTEST_PAST, 2 * needed), LONGEST_PAST)
+    """Return how far in the past simulated time must begin so as not to catch up with now.
+
+    Where no end is set, that is after a shift; from then on the plant waits for each minute.
+    """
+    needed = int((duration_seconds or SHIFT_SECONDS) * pace) * INTERVAL + DAY
+    return min(max(SHORTEST_PAST, needed), LONGEST_PAST)
 
 
 class Demo:
@@ -133,7 +137,7 @@ class Demo:
         if not self.console.is_terminal:
             yield lambda _text: None
             return
-        with self.console.status("") as status:
+        with self.console.status("", spinner_style="dim") as status:
             yield lambda text: status.update(f"[dim]{text}[/]")
 
     def greet(self, broker: str, pace: float, seed: int) -> None:
