@@ -1,5 +1,6 @@
 """The commands as a user types them: exit codes, help, errors without a traceback."""
 
+import os
 import socket
 import subprocess
 import sys
@@ -41,6 +42,12 @@ def test_the_settings_that_ship_are_good(name: str) -> None:
     assert done.returncode == 0, done.stderr
     assert "press1.force" in done.stdout
     assert "no safety function" in done.stdout
+
+
+def test_a_terminal_without_the_trades_letters_is_no_reason_to_fail() -> None:
+    environment = {**os.environ, "PYTHONIOENCODING": "ascii"}
+    done = quietmill("check", REPOSITORY / "config" / "tileworks.yaml", env=environment)
+    assert done.returncode == 0, done.stderr
 
 
 @pytest.mark.parametrize("command", ["check", "run"])

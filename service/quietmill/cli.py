@@ -1,6 +1,7 @@
 """The commands. Exit codes: 0 done, 1 the work failed, 2 bad usage or bad settings."""
 
 import sys
+from io import TextIOWrapper
 from pathlib import Path
 from typing import Any
 
@@ -66,6 +67,9 @@ def main() -> None:
 
     quietmill informs people; it is no safety function.
     """
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, TextIOWrapper):  # a terminal without the trade's letters shows a mark for each
+            stream.reconfigure(errors="replace")
 
 
 @main.command()
