@@ -147,5 +147,5 @@ def written(characteristic: Characteristic) -> str:
 
 def judged_alike(one: Characteristic, other: Characteristic) -> bool:
     """Return whether a row may keep its state from one settings file to the next."""
-    exclude = set(IN_PLACE)
+    exclude: set[str] = set(IN_PLACE)
     return one.model_dump(exclude=exclude) == other.model_dump(exclude=exclude)
