@@ -9,6 +9,9 @@ from pathlib import Path
 import pytest
 
 from broker import Peer, running, wait_for
+from quietmill.model import Outcome
+from quietmill.monitor import Monitor
+from quietmill.settings import load
 from record.test_crash import service_with_record
 from test_end_to_end import live_events, messages, readings, replayed
 
@@ -56,6 +59,32 @@ def test_a_record_that_cannot_be_written_holds_readings_until_it_can(tmp_path: P
     assert [entry["reason"] for entry in service.log() if entry["event"] == "the record cannot be written"] == [
         "cannot be written: another program holds the file"
     ]
+
+
+def test_a_service_that_holds_too_much_hangs_up_and_lets_the_broker_queue(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("quietmill.monitor.HELD_MESSAGES", 10)
+    rows = readings(60)
+    with contextlib.ExitStack() as stack:
+        broker = stack.enter_context(running(tmp_path))
+        peer = stack.enter_context(Peer(broker.port))
+        monitor = Monitor(load(service_with_record(tmp_path, broker).config))
+        stack.callback(monitor.close)
+        monitor.start()
+        wait_for(lambda: monitor.turn(0.02) or not list(monitor.troubles()), what="the service to be ready")
+        holder = sqlite3.connect(tmp_path / "quietmill.db", isolation_level=None)
+        holder.execute("BEGIN IMMEDIATE")
+        for message in messages(rows):
+            peer.client.publish(*message, 1)
+        wait_for(lambda: monitor.turn(0.02) or not monitor.connection.connected, what="the service to hang up")
+        assert any("more readings than it can keep" in trouble for trouble in monitor.troubles())
+        holder.execute("ROLLBACK")
+        holder.close()
+        accepted = monitor.tally.outcomes
+        wait_for(lambda: monitor.turn(0.02) or accepted[Outcome.ACCEPTED] == len(rows), what="all readings")
+        assert accepted.sum() == len(rows)
+        assert monitor.connection.connected
 
 
 def test_a_record_that_is_deleted_stops_the_service_before_it_acknowledges(tmp_path: Path) -> None:
