@@ -75,7 +75,7 @@ def main() -> None:
 @main.command()
 @CONFIG
 def run(config: Path) -> None:
-    """Run the service until SIGTERM or Ctrl-C.
+    """Run the service until SIGTERM or Ctrl-C; SIGHUP reads the settings again.
 
     \b
     Example:   quietmill run config/minimal.yaml

@@ -23,6 +23,7 @@ import time
 from collections import deque
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from errno import EADDRINUSE
+from functools import partial
 from typing import Final, NamedTuple
 
 import numpy as np
@@ -43,8 +44,8 @@ from quietmill.outlets.web import Handover, Health, WebServer
 from quietmill.record.entries import ReadingsEntry
 from quietmill.record.record import Letter as Outgoing
 from quietmill.record.record import Record, RecordBusyError, RecordError, RecordLostError
-from quietmill.recovery import Recovered, recover
-from quietmill.settings import Settings
+from quietmill.recovery import Recovered, recover, text_of
+from quietmill.settings import Settings, SettingsError, load
 from quietmill.signals.event import Event
 
 __all__ = ["Monitor", "ServiceError", "StartError", "run_service"]
@@ -61,6 +62,8 @@ MOST_NOTES: Final = 1000
 """So many kinds of bad input are logged, each once; all are counted."""
 
 
+RESTARTING: Final = ("broker", "record", "web", "publish")
+"""Parts of the settings that a reload cannot change."""
 HELD_MESSAGES: Final = 100_000
 HELD_BYTES: Final = 64 * 1024 * 1024
 """With more held that cannot be committed, the service hangs up and lets the broker queue."""
@@ -100,8 +103,11 @@ class Monitor:
         self.at: Callable[[str], None] = lambda _step: None
         """A seam for tests: called with the name of each step of a batch when it is done."""
         self.stopping = False
+        self.reloaded = True
+        self._reload_asked = False
         self.tally = Tally(len(characteristics))
         self.routes = Routes(characteristics)
+        self.writer = Writer(characteristics)
         self._held: deque[Held] = deque()
         self._unsaid: tuple[int, list[Outgoing]] | None = None
         self._unacknowledged: list[Message] = []
@@ -128,7 +134,7 @@ class Monitor:
             self.handover = Handover(self.connection.wake)
             web = settings.web
             try:
-                self.web = WebServer(web.host, web.port, Writer(characteristics), self.handover, self.health)
+                self.web = WebServer(web.host, web.port, self.handover, self.health)
             except OSError as error:
                 reason = error.strerror or str(error)
                 question = "; is another service there?" if error.errno == EADDRINUSE else ""
@@ -196,10 +202,13 @@ class Monitor:
             self._hold(batch)
         if self._held or self._unsaid:
             self._work_off()
+        if self._reload_asked and not (self._held or self._unsaid):
+            self._reload_asked = False
+            self.reload()
         self.publisher.turn()
         self._acknowledge()
         self.connection.send()
-        self.handover.serve(self.copies)
+        self.handover.serve(self.exposition)
         self.health.turn(tuple(self.troubles()))
 
     def _hold(self, batch: Sequence[Message]) -> None:
@@ -335,6 +344,10 @@ class Monitor:
         if self.publisher.full:
             yield f"more than {OUTBOX_LIMIT:,} events wait for the broker; no readings are acknowledged meanwhile"
 
+    def exposition(self) -> Callable[[], bytes]:
+        """Return what writes a scrape from copies made now, in whichever thread."""
+        return partial(self.writer.write, self.copies())
+
     def copies(self) -> Copies:
         """Return what a scrape shows."""
         tally = self.tally
@@ -349,7 +362,65 @@ class Monitor:
             connected=self.connection.connected,
             outbox=self.publisher.outstanding,
             record_bytes=self.record.bytes if self.record is not None else 0,
+            reloaded=self.reloaded,
         )
+
+    def ask_reload(self) -> None:
+        """Read the settings file again after this turn; for signal handlers and other threads."""
+        self._reload_asked = True
+        self.connection.wake()
+
+    def reload(self) -> None:
+        """Take the settings file over as it is now: whole, or not at all.
+
+        A characteristic that is judged alike keeps its state bit for bit; another starts afresh, its number going on.
+        """
+        before, self.reloaded = self.settings, False
+        try:
+            after = load(before.path)
+        except SettingsError as error:
+            log.error("settings not reloaded", problems=[str(problem) for problem in error.problems])
+            return
+        changed = [part for part in RESTARTING if getattr(after, part) != getattr(before, part)]
+        if changed:
+            log.error(
+                "settings not reloaded", reason=f"{', '.join(changed)} changed, which needs a restart of the service"
+            )
+            return
+        judging, events = self.judging.under(after.characteristics)
+        letters = self._event_letters(events)
+        gone = {one.id for one in before.characteristics} - {one.id for one in after.characteristics}
+        letters += [self.publisher.status_letter(name, b"")[:4] for name in sorted(gone)]
+        if self.record is not None:
+            snapshot = judging.snapshot(self.redelivery.seen, self._messages)
+            try:
+                posted = self.record.commit_settings(text_of(after.characteristics), letters, snapshot)
+            except RecordBusyError as error:
+                log.error("settings not reloaded", reason=f"the record {error}")
+                return
+            self._since_snapshot = [0, 0]
+        else:
+            posted = [(*letter, 0) for letter in letters]
+        for letter in posted:
+            self.publisher.put(Letter(*letter))
+        self._count_on(before, after)
+        self.settings, self.judging = after, judging
+        self.routes, self.writer = Routes(after.characteristics), Writer(after.characteristics)
+        self.connection.listen_to(self.routes.topics)
+        self.tell_all_status()
+        self.reloaded = True
+        log.info(
+            "settings reloaded", characteristics=len(after.characteristics), signals_ended=len(events), gone=len(gone)
+        )
+
+    def _count_on(self, before: Settings, after: Settings) -> None:
+        """Keep the counts of signals with their characteristics, wherever these stand now."""
+        places = {one.id: row for row, one in enumerate(before.characteristics)}
+        signals = Tally(len(after.characteristics)).signals
+        for row, one in enumerate(after.characteristics):
+            if one.id in places:
+                signals[row] = self.tally.signals[places[one.id]]
+        self.tally.signals = signals
 
     def stop(self) -> None:
         """End the loop after its turn; for signal handlers and other threads."""
@@ -385,8 +456,9 @@ class Monitor:
 
 @contextlib.contextmanager
 def stopped_by_signals(monitor: Monitor) -> Iterator[None]:
-    """Let SIGTERM and SIGINT end the loop of a monitor."""
+    """Let SIGTERM and SIGINT end the loop of a monitor, and SIGHUP read its settings again."""
     before = {number: signal.signal(number, lambda *_: monitor.stop()) for number in (signal.SIGTERM, signal.SIGINT)}
+    before[signal.SIGHUP] = signal.signal(signal.SIGHUP, lambda *_: monitor.ask_reload())
     try:
         yield
     finally:

@@ -13,7 +13,7 @@ from quietmill.record.record import Letter, Record
 from quietmill.settings import Characteristic
 from quietmill.signals.event import Event
 
-__all__ = ["Recovered", "recover"]
+__all__ = ["Recovered", "recover", "text_of"]
 
 
 class Recovered(NamedTuple):

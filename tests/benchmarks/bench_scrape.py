@@ -8,6 +8,8 @@ import sys
 import threading
 import time
 import urllib.request
+from collections.abc import Callable
+from functools import partial
 from statistics import median
 
 import numpy as np
@@ -39,12 +41,13 @@ class Plant:
         self.handover = Handover(lambda: None)
         self.stream = np.random.default_rng(7)
         self.messages = 0
-        self.web = WebServer("127.0.0.1", 0, Writer(characteristics), self.handover, Health())
+        self.writer = Writer(characteristics)
+        self.web = WebServer("127.0.0.1", 0, self.handover, Health())
 
-    def copies(self) -> Copies:
+    def exposition(self) -> Callable[[], bytes]:
         tally = self.tally
         arrays = (tally.signals.copy(), tally.outcomes.copy(), tally.decision.copy(), tally.batch.copy())
-        return Copies(self.bank.rows, shown(self.bank.state), *arrays, 0, True, 0)
+        return partial(self.writer.write, Copies(self.bank.rows, shown(self.bank.state), *arrays, 0, True, 0))
 
     def batch(self) -> None:
         readings = np.zeros(BATCH, READING)
@@ -54,7 +57,7 @@ class Plant:
         self.messages += BATCH
         verdicts = self.bank.judge(readings)
         self.tally.outcomes += np.bincount(verdicts.outcomes, minlength=len(self.tally.outcomes))
-        self.handover.serve(self.copies)
+        self.handover.serve(self.exposition)
 
     def turn(self, seconds: float) -> np.ndarray:
         """Judge a batch at each stroke of the pace; return by how much each was done later than its stroke, in ms."""

@@ -5,6 +5,7 @@ import urllib.error
 import urllib.request
 from collections.abc import Iterator
 from concurrent.futures import ThreadPoolExecutor
+from functools import partial
 
 import pytest
 from prometheus_client.parser import text_string_to_metric_families
@@ -13,7 +14,7 @@ from broker import wait_for
 from quietmill.charts.bank import Bank
 from quietmill.outlets import web
 from quietmill.outlets.metrics import CONTENT_TYPE, Copies, Tally, Writer
-from quietmill.outlets.web import Handover, Health, WebServer
+from quietmill.outlets.web import Exposition, Handover, Health, WebServer
 from quietmill.settings import Characteristic
 
 PRESS = Characteristic.model_validate(
@@ -54,9 +55,9 @@ class Loop:
             self.woken.clear()
             self.handover.serve(self.make)
 
-    def make(self) -> Copies:
+    def make(self) -> Exposition:
         self.made += 1
-        return copies()
+        return partial(Writer([PRESS]).write, copies())
 
     def stop(self) -> None:
         self.turning = False
@@ -73,7 +74,7 @@ def loop() -> Iterator[Loop]:
 
 
 def server_of(loop: Loop, port: int = 0) -> WebServer:
-    return WebServer("127.0.0.1", port, Writer([PRESS]), loop.handover, loop.health)
+    return WebServer("127.0.0.1", port, loop.handover, loop.health)
 
 
 @pytest.fixture
@@ -197,7 +198,7 @@ def test_nothing_of_the_server_is_printed(loop: Loop, server: WebServer, capfd: 
 
 
 def test_all_that_ask_before_the_loop_turns_share_one_copy(loop: Loop) -> None:
-    asked: list[Copies | None] = []
+    asked: list[Exposition | None] = []
     threads = [threading.Thread(target=lambda: asked.append(loop.handover.ask(30))) for _ in range(5)]
     for thread in threads:
         thread.start()

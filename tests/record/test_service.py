@@ -1,9 +1,11 @@
 """The service with its record: what happens when the file cannot be written, is held, or is gone."""
 
 import contextlib
+import signal
 import sqlite3
 import subprocess
 import sys
+from collections.abc import Callable
 from pathlib import Path
 
 import pytest
@@ -11,8 +13,10 @@ import pytest
 from broker import Peer, running, wait_for
 from quietmill.model import Outcome
 from quietmill.monitor import Monitor
+from quietmill.record.record import Record
 from quietmill.settings import load
-from record.test_crash import service_with_record
+from record.test_crash import PLANT, service_with_record
+from service import Service
 from test_end_to_end import live_events, messages, readings, replayed
 
 pytestmark = pytest.mark.broker
@@ -131,3 +135,76 @@ def test_an_edited_settings_file_is_taken_over_at_the_next_start(tmp_path: Path)
         wait_for(lambda: len(live_events(peer)) == 3, what="the next signal")
         assert live_events(peer)[2]["data"]["point"]["number"] == 2
         service.stop()
+
+
+def hang_up(service: Service, done: Callable[[], object], what: str) -> None:
+    """Send SIGHUP and wait for what it does."""
+    assert service.process is not None
+    service.process.send_signal(signal.SIGHUP)
+    wait_for(done, what=what)
+
+
+def said(peer: Peer) -> list[tuple[str, int]]:
+    """Return kind and point's number of all events."""
+    return [(event["type"].rsplit(".", 1)[1], event["data"]["point"]["number"]) for event in live_events(peer)]
+
+
+def test_a_reload_keeps_what_is_judged_alike_and_follows_the_rest(tmp_path: Path) -> None:
+    press = '{"force": %s, "mm": 8.7, "at": "2026-03-02T06:00:%02dZ"}'
+    with contextlib.ExitStack() as stack:
+        broker = stack.enter_context(running(tmp_path))
+        peer = stack.enter_context(Peer(broker.port, "quietmill/#"))
+        with service_with_record(tmp_path, broker) as service:
+            peer.publish(("tiles/press/1", press % (260, 1)))
+            peer.publish(("tiles/kiln/1", '{"samples": [{"t": 1145, "at": "2026-03-02T06:00:00Z"}]}'))
+            wait_for(lambda: service.accepted() == 3, what="three readings")
+            text = service.config.read_text().replace("tiles/kiln/1", "tiles/kiln/9").replace("unit: mm", "unit: um")
+            text = text.replace("cusum: {k: 0.5, h: 5}", "cusum: {k: 0.5, h: 6}")
+            service.config.write_text(text)
+            hang_up(service, lambda: any(b'"reload"' in body for body in peer.payloads("quietmill/signals")), "the end")
+            peer.publish(("tiles/press/1", press % (262, 2)))
+            peer.publish(("tiles/kiln/1", '{"samples": [{"t": 1145, "at": "2026-03-02T06:00:10Z"}]}'))
+            peer.publish(("tiles/kiln/9", '{"samples": [{"t": 1146, "at": "2026-03-02T06:00:10Z"}]}'))
+            wait_for(lambda: service.accepted() == 6, what="the readings under the new settings")
+            wait_for(lambda: [number for kind, number in said(peer) if kind == "raised"] == [1, 2], what="the signals")
+            assert service.metric('quietmill_signals_total{characteristic="press1.force",rule="beyond_limits"}') == 2
+            assert service.metric("quietmill_config_last_reload_successful") == 1
+            assert service.stop() == 0
+        record = Record(tmp_path / "quietmill.db", PLANT)
+        assert record.number == record.judged
+        record.close()
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "reason"),
+    [
+        ("sigma: 2", "sigma: -2", "must be greater than 0, is -2"),
+        ("client_id: quietmill", "client_id: other", "broker changed, which needs a restart of the service"),
+        ("record: sqlite:quietmill.db", "record: sqlite:other.db", "record changed, which needs a restart"),
+    ],
+)
+def test_a_reload_that_cannot_be_leaves_the_old_settings_at_work(
+    tmp_path: Path, old: str, new: str, reason: str
+) -> None:
+    with running(tmp_path) as broker, Peer(broker.port) as peer, service_with_record(tmp_path, broker) as service:
+        service.config.write_text(service.config.read_text().replace(old, new))
+        hang_up(service, lambda: service.metric("quietmill_config_last_reload_successful") == 0, "the refusal")
+        assert reason in service.log_file.read_text()
+        peer.publish(("tiles/press/1", '{"force": 240, "mm": 8.7, "at": "2026-03-02T06:00:00Z"}'))
+        wait_for(lambda: service.accepted() == 2, what="readings under the old settings")
+
+
+def test_the_status_of_a_characteristic_that_is_gone_is_cleared(tmp_path: Path) -> None:
+    with running(tmp_path) as broker, service_with_record(tmp_path, broker) as service:
+        text = service.config.read_text()
+        service.config.write_text(text[: text.index(",\n  {id: kiln1.zone1")] + "]\nrecord: sqlite:quietmill.db\n")
+        with Peer(broker.port, "quietmill/status/+") as peer:
+            wait_for(lambda: len(peer.received) >= 3, what="all status")
+            cleared = ("quietmill/status/kiln1.zone1", b"", False)
+            hang_up(service, lambda: cleared in peer.received, "the status to be cleared")
+        with Peer(broker.port, "quietmill/status/+", name="late") as late:
+            wait_for(lambda: len(late.received) >= 2, what="the status that is left")
+            assert {topic for topic, _, _ in late.received} == {
+                "quietmill/status/press1.force",
+                "quietmill/status/press1.thickness",
+            }

@@ -140,6 +140,15 @@ class Connection:
             self._socket.flush()
             self._watch(self._socket)
 
+    def listen_to(self, topics: Sequence[str]) -> None:
+        """Follow other topics from now on; the session forgets those that are not among them."""
+        before, self._subscriptions = self._subscriptions, Subscriptions(topics)
+        if self.connected:
+            added = [topic for topic in topics if topic not in before.wanted]
+            self._subscriptions.begin(self._client.subscribe_to(added))
+            self._client.unsubscribe_from(sorted(before.wanted - self._subscriptions.wanted))
+            self.send()
+
     def suspend(self) -> None:
         """Hang up and stay away until `resume`; the broker keeps the session and queues for it.
 

@@ -133,6 +133,11 @@ class Client(mqtt.Client):
             if number is not None:
                 yield number, some
 
+    def unsubscribe_from(self, topics: Sequence[str]) -> None:
+        """Unsubscribe, in packets of bounded size."""
+        for begin in range(0, len(topics), TOPICS_A_PACKET):
+            self.unsubscribe(list(topics[begin : begin + TOPICS_A_PACKET]))
+
     def say(self, topic: str, payload: bytes, retain: bool, content_type: str | None) -> int:
         """Publish with QoS 1; return the number by which the broker will acknowledge it."""
         properties = None

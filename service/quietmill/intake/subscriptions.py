@@ -18,7 +18,7 @@ class Subscriptions:
 
     def __init__(self, topics: Sequence[str]) -> None:
         self.topics = tuple(topics)
-        self._wanted = frozenset(topics)
+        self.wanted = frozenset(topics)
         self._asked: dict[int, Sequence[str]] = {}
         self._refused: dict[str, str] = {}
         self._said = ""
@@ -45,7 +45,7 @@ class Subscriptions:
 
     def dispensable(self, topic: str) -> bool:
         """Whether to unsubscribe from a topic that the session still brings; true once on each connection."""
-        if topic in self._wanted or topic in self._dropped:
+        if topic in self.wanted or topic in self._dropped:
             return False
         if not self._dropped:
             log.info("unsubscribing from topics that are no longer in the settings", first=topic)

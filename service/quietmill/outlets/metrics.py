@@ -90,6 +90,7 @@ class Copies:
     connected: bool
     outbox: int
     record_bytes: int = 0
+    reloaded: bool = True
 
 
 SHOWN: Final[tuple[str, ...]] = ("number", "value", "ewma", "cusum_high", "cusum_low", "open", "accepted", "last_time")
@@ -130,7 +131,7 @@ class ServiceCollector(Collector):
         text = "Size of the record's file with its write-ahead log; 0 without a record."
         yield GaugeMetricFamily("quietmill_journal_bytes", text, copies.record_bytes)
         text = "Whether the settings were taken over when they were last read."
-        yield GaugeMetricFamily("quietmill_config_last_reload_successful", text, 1)
+        yield GaugeMetricFamily("quietmill_config_last_reload_successful", text, int(copies.reloaded))
 
 
 def escaped(text: str) -> str:

@@ -13,9 +13,9 @@ from starlette.requests import Request
 from starlette.responses import PlainTextResponse, Response
 from starlette.routing import Route
 
-from quietmill.outlets.metrics import CONTENT_TYPE, Copies, Writer
+from quietmill.outlets.metrics import CONTENT_TYPE
 
-__all__ = ["Handover", "Health", "WebServer"]
+__all__ = ["Exposition", "Handover", "Health", "WebServer"]
 
 COPY_SECONDS: Final = 5.0
 """How long a scrape waits for the loop."""
@@ -49,8 +49,12 @@ class Health:
         return f"the loop has not turned for {age_seconds:.0f} s" if age_seconds > BEAT_SECONDS else None
 
 
+Exposition = Callable[[], bytes]
+"""Writes what a scrape shows, from copies made beforehand, in the thread of whoever calls it."""
+
+
 class Handover:
-    """Hands copies of the arrays from the loop to whoever asks; none are made unasked.
+    """Hands an exposition of the arrays as they are from the loop to whoever asks; none is made unasked.
 
     `wake` rouses the loop where it waits for readings.
     """
@@ -58,11 +62,11 @@ class Handover:
     def __init__(self, wake: Callable[[], None]) -> None:
         self._wake = wake
         self._lock = threading.Lock()
-        self._request: Future[Copies | None] | None = None
+        self._request: Future[Exposition | None] | None = None
         self._closed = False
 
-    def ask(self, timeout_seconds: float) -> Copies | None:
-        """Return fresh copies, or None when the loop gives none in time. For any thread but the loop's."""
+    def ask(self, timeout_seconds: float) -> Exposition | None:
+        """Return a fresh exposition, or None when the loop gives none in time. For any thread but the loop's."""
         with self._lock:
             if self._closed:
                 return None
@@ -76,8 +80,8 @@ class Handover:
         except TimeoutError:
             return None
 
-    def serve(self, make: Callable[[], Copies]) -> None:
-        """Make copies if somebody waits for them. For the loop, between two batches."""
+    def serve(self, make: Callable[[], Exposition]) -> None:
+        """Make an exposition if somebody waits for it. For the loop, between two batches."""
         if self._request is None:
             return
         with self._lock:
@@ -99,8 +103,8 @@ class WebServer:
     The address is taken, and connections wait, as soon as it is built; raises `OSError` where it cannot be had.
     """
 
-    def __init__(self, host: str, port: int, writer: Writer, handover: Handover, health: Health) -> None:
-        self._writer, self._handover, self._health = writer, handover, health
+    def __init__(self, host: str, port: int, handover: Handover, health: Health) -> None:
+        self._handover, self._health = handover, health
         family = socket.AF_INET6 if ":" in host else socket.AF_INET
         self._socket = socket.socket(family, socket.SOCK_STREAM)
         self._socket.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
@@ -143,11 +147,11 @@ class WebServer:
         self._socket.close()
 
     def metrics(self, _request: Request) -> Response:
-        """Return the exposition; 503 when the loop gives no copies."""
-        copies = self._handover.ask(COPY_SECONDS)
-        if copies is None:
+        """Return the exposition; 503 when the loop gives none."""
+        exposition = self._handover.ask(COPY_SECONDS)
+        if exposition is None:
             return unavailable(f"the loop has not answered for {COPY_SECONDS:g} s")
-        return Response(self._writer.write(copies), headers={"content-type": CONTENT_TYPE})
+        return Response(exposition(), headers={"content-type": CONTENT_TYPE})
 
     # Health answers without a worker thread: they may all be waiting for a stuck loop.
 
