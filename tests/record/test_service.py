@@ -68,7 +68,7 @@ def test_a_record_that_cannot_be_written_holds_readings_until_it_can(tmp_path: P
 def test_a_service_that_holds_too_much_hangs_up_and_lets_the_broker_queue(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    monkeypatch.setattr("quietmill.monitor.HELD_MESSAGES", 10)
+    monkeypatch.setattr("quietmill.passage.HELD_MESSAGES", 10)
     rows = readings(60)
     with contextlib.ExitStack() as stack:
         broker = stack.enter_context(running(tmp_path))

@@ -20,7 +20,7 @@ def main(config: str, step: str, count: str) -> None:
             if left[0] == 0:
                 os.kill(os.getpid(), signal.SIGKILL)
 
-    monitor.at = at
+    monitor.passage.at = at
     with stopped_by_signals(monitor):
         monitor.start()
         while not monitor.stopping:
