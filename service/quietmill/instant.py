@@ -15,6 +15,7 @@ __all__ = [
     "FIRST",
     "LAST",
     "MICROSECONDS_PER_SECOND",
+    "MILLISECONDS_FROM",
     "UNITS",
     "format_time",
     "from_float",

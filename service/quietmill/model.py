@@ -19,6 +19,7 @@ __all__ = [
     "LOW",
     "NOTICE",
     "NO_TIME",
+    "OUT_OF_RANGE_SIGMAS",
     "POINT",
     "READING",
     "RECENT",
@@ -67,6 +68,10 @@ class Outcome(IntEnum):
     def label(self) -> str:
         """The outcome as metrics, logs and tables write it."""
         return self.name.lower()
+
+
+OUT_OF_RANGE_SIGMAS: Final = 1e9
+"""Farther from the centre a value is no measurement, and would swamp every sum it enters."""
 
 
 class Rule(IntEnum):

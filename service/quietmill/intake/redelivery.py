@@ -1,17 +1,10 @@
 """Messages that the broker sends again, told from new ones."""
 
 from collections.abc import Mapping, Sequence
-from hashlib import blake2b
 
-from quietmill.intake.message import Message
+from quietmill.intake.message import Message, fingerprint
 
 __all__ = ["Redelivery"]
-
-
-def fingerprint(message: Message) -> int:
-    """Return a hash of topic and payload that is the same in every process."""
-    content = message.topic.encode(errors="surrogatepass") + b"\0" + message.payload
-    return int.from_bytes(blake2b(content, digest_size=8).digest(), "big") >> 1
 
 
 class Redelivery:

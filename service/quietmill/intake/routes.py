@@ -3,16 +3,15 @@
 from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from hashlib import blake2b
 from types import MappingProxyType
 from typing import Final, NamedTuple
 
 import numpy as np
 
-from quietmill.intake.message import Message
+from quietmill.intake.message import Message, fingerprint
 from quietmill.intake.payloads import Reader, Refusal, reader_of
-from quietmill.intake.screen import FUTURE_MICROSECONDS, OUT_OF_RANGE_SIGMAS, screen
-from quietmill.model import NO_TIME, READING, Outcome, Records
+from quietmill.intake.screen import FUTURE_MICROSECONDS, screen
+from quietmill.model import NO_TIME, OUT_OF_RANGE_SIGMAS, READING, Outcome, Records
 from quietmill.settings import Characteristic
 
 __all__ = ["MAX_PAYLOAD_BYTES", "Decoded", "Note", "Routes"]
@@ -165,7 +164,7 @@ class Routes:
         readings["value"] = value
         readings["fingerprint"] = value.view(np.uint64)
         for first, last, message in batch.several:
-            readings["fingerprint"][first:last] = _fingerprint(message)
+            readings["fingerprint"][first:last] = fingerprint(message)
         return readings
 
 
@@ -200,9 +199,3 @@ _TOO_LARGE: Final = Refusal(Outcome.TOO_LARGE, f"at most {MAX_PAYLOAD_BYTES} byt
 
 def _printable(text: str) -> str:
     return "".join(character if character.isprintable() else "\N{REPLACEMENT CHARACTER}" for character in text[:_SHOWN])
-
-
-def _fingerprint(message: Message) -> int:
-    """Return a hash of topic and payload that is the same in every process."""
-    content = message.topic.encode(errors="surrogatepass") + b"\0" + message.payload
-    return int.from_bytes(blake2b(content, digest_size=8).digest(), "big")

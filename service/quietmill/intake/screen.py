@@ -5,15 +5,12 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-from quietmill.model import Outcome, Records
+from quietmill.model import OUT_OF_RANGE_SIGMAS, Outcome, Records
 
-__all__ = ["FUTURE_MICROSECONDS", "OUT_OF_RANGE_SIGMAS", "screen"]
+__all__ = ["FUTURE_MICROSECONDS", "screen"]
 
 FUTURE_MICROSECONDS: Final = 5 * 60 * 1_000_000
 """How far a reading's own time may lie after its arrival: clocks of machines differ."""
-
-OUT_OF_RANGE_SIGMAS: Final = 1e9
-"""Farther from the centre a value is no measurement, and would swamp every sum it enters."""
 
 
 def screen(readings: Records, centre: NDArray[np.float64], sigma: NDArray[np.float64]) -> NDArray[np.uint8]:

@@ -20,8 +20,8 @@ import msgspec
 import numpy as np
 from numpy.typing import NDArray
 
-from quietmill.instant import from_number, parse_time
-from quietmill.model import NO_TIME, READING, Outcome, Records
+from quietmill.instant import MILLISECONDS_FROM, from_number, parse_time
+from quietmill.model import NO_TIME, OUT_OF_RANGE_SIGMAS, READING, Outcome, Records
 from quietmill.numeral import number_text
 from quietmill.settings import Characteristic
 from quietmill.study.arrow import CleanColumns, read_clean
@@ -29,8 +29,6 @@ from quietmill.study.columns import Columns, read_columns
 
 __all__ = ["Chunk", "History", "Refusal"]
 
-OUT_OF_RANGE_SIGMAS: Final = 1e9
-MILLISECONDS_FROM: Final = 10**11
 LATEST_MILLISECONDS: Final = 10**14
 LARGEST_SEQUENCE: Final = 2**63 - 1
 
