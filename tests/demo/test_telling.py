@@ -2,6 +2,7 @@ import threading
 import time
 from io import StringIO
 from pathlib import Path
+from typing import Any
 
 import pytest
 from rich.console import Console
@@ -34,8 +35,8 @@ def output() -> StringIO:
     return StringIO()
 
 
-def demo(folder: Path, output: StringIO, begin: int = 0) -> Demo:
-    console = Console(file=output, width=200, highlight=False)
+def demo(folder: Path, output: StringIO, begin: int = 0, width: int = 200, terminal: bool = False) -> Demo:
+    console = Console(file=output, width=width, highlight=False, force_terminal=terminal, color_system=None)
     return Demo(console, adapted_settings(folder, 1, 2), 1, begin)
 
 
@@ -48,6 +49,28 @@ def event(number: int, kind: str = "raised", name: str = "press1.moisture", iden
 def test_each_event_is_told_with_its_time_and_its_sentence(tmp_path: Path, output: StringIO) -> None:
     demo(tmp_path, output).tell(event(5))
     assert output.getvalue() == "2026-03-02 08:14  press1.moisture [is] high\n"
+
+
+def test_on_a_narrow_terminal_a_sentence_goes_on_beneath_its_beginning(tmp_path: Path, output: StringIO) -> None:
+    demo(tmp_path, output, width=36, terminal=True).tell(event(5))
+    assert output.getvalue().split("\n") == [
+        "2026-03-02 08:14  press1.moisture   ",
+        " " * 18 + "[is] high         ",
+        "",
+    ]
+
+
+def test_elsewhere_a_sentence_is_one_line_however_long(tmp_path: Path, output: StringIO) -> None:
+    one = demo(tmp_path, output, width=36)
+    one.console.soft_wrap = True
+    one.tell(event(5))
+    assert output.getvalue() == "2026-03-02 08:14  press1.moisture [is] high\n"
+
+
+def test_the_greeting_names_what_sends_no_time(tmp_path: Path, output: StringIO) -> None:
+    demo(tmp_path, output).greet("Mosquitto", 5.0, 1)
+    assert "38 characteristics on Mosquitto: a reading a minute each, 300 times as fast" in output.getvalue()
+    assert "Readings without a time get that of their arrival: sorting.line_speed." in output.getvalue()
 
 
 def test_an_event_that_comes_twice_is_told_and_counted_once(tmp_path: Path, output: StringIO) -> None:
@@ -69,14 +92,16 @@ def test_only_raised_signals_stand_on_the_scorecard(tmp_path: Path, output: Stri
 
 def test_simulated_time_never_overtakes_now(tmp_path: Path, output: StringIO) -> None:
     one = demo(tmp_path, output, begin=now_us() - 3 * INTERVAL + INTERVAL // 2)
-    one.go(SilentPlantSide(), SilentPlantSide(), 1.0, 1000, threading.Event())
+    silent: Any = SilentPlantSide()
+    one.go(silent, silent, 1.0, 1000, threading.Event())
     assert one.plant.steps == 3
 
 
 def test_a_plant_whose_broker_is_behind_waits(tmp_path: Path, output: StringIO) -> None:
-    one, behind = demo(tmp_path, output), SilentPlantSide()
+    one = demo(tmp_path, output)
+    behind: Any = SilentPlantSide()
     behind.full = True
-    one.go(behind, SilentPlantSide(), 0.2, 1000, threading.Event())
+    one.go(behind, behind, 0.2, 1000, threading.Event())
     assert one.plant.steps == behind.messages == 0
 
 

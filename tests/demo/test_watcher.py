@@ -5,7 +5,6 @@ from pathlib import Path
 import pytest
 
 from broker import Peer, running, wait_for
-from quietmill.demo import broker as module
 from quietmill.demo.broker import DemoError, free_port, start_broker
 from quietmill.demo.service import adapted_settings
 from quietmill.demo.watcher import Heard, Watcher
@@ -59,6 +58,7 @@ def test_a_broker_that_goes_ends_the_demo(tmp_path: Path) -> None:
 def test_the_plant_waits_while_the_broker_is_behind(tmp_path: Path) -> None:
     with running(tmp_path) as broker:
         watcher = Watcher(adapted_settings(tmp_path, broker.port, 1))
+        assert broker.process
         broker.process.send_signal(signal.SIGSTOP)
         watcher.publish([("tiles/press/1", b"{}")] * 2000)
         assert not watcher.full
@@ -75,7 +75,7 @@ def test_a_broker_that_does_not_answer_is_named(tmp_path: Path) -> None:
 
 
 def test_a_demo_without_any_broker_says_what_to_install(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    monkeypatch.setattr(module.shutil, "which", lambda *_, **__: None)
+    monkeypatch.setattr("shutil.which", lambda *_, **__: None)
     monkeypatch.setitem(sys.modules, "iotcore", None)
     with pytest.raises(DemoError, match=r"install mosquitto, or .*quietmill\[demo\]"), start_broker(tmp_path):
         pass
@@ -85,6 +85,6 @@ def test_a_broker_that_cannot_start_says_why(monkeypatch: pytest.MonkeyPatch, tm
     program = tmp_path / "mosquitto"
     program.write_text("#!/bin/sh\necho 'Error: the port is taken'\nexit 1\n")
     program.chmod(0o755)
-    monkeypatch.setattr(module.shutil, "which", lambda *_, **__: str(program))
+    monkeypatch.setattr("shutil.which", lambda *_, **__: str(program))
     with pytest.raises(DemoError, match="the broker did not start: Error: the port is taken"), start_broker(tmp_path):
         pass

@@ -11,6 +11,7 @@ from tempfile import TemporaryDirectory
 from typing import Final
 
 from rich.console import Console
+from rich.table import Table
 from rich.text import Text
 
 from quietmill.demo.broker import DemoError, free_port, start_broker
@@ -127,9 +128,19 @@ class Demo:
         kind = event["type"].rpartition(".")[2]
         style = GOOD_NEWS if data["favourable"] and kind == "raised" else STYLES.get(kind, "")
         when = event["time"][:16].replace("T", " ")
-        self.console.print(Text.assemble((when, "dim"), "  ", (data["summary"], style)))
+        self.line(Text(when, "dim"), Text(data["summary"], style))
         if kind == "raised":
             self.scorecard.raised(data["characteristic"], data["point"]["number"])
+
+    def line(self, when: Text, said: Text) -> None:
+        """Print a time and what was said: beside it on a terminal, however long; elsewhere on one line."""
+        if not self.console.is_terminal:
+            self.console.print(Text("  ").join((when, said)))
+            return
+        beside = Table.grid(padding=(0, 2))
+        beside.add_column(no_wrap=True)
+        beside.add_row(when, said)
+        self.console.print(beside)
 
     @contextlib.contextmanager
     def progress(self) -> Generator[Callable[[str], None]]:
@@ -145,9 +156,12 @@ class Demo:
         count, faults = len(self.settings.characteristics), len(self.scorecard.faults)
         self.console.print(
             f"A tile works of {count} characteristics on {broker}: a reading a minute each, "
-            f"{pace * INTERVAL / 1e6:g} times as fast as real."
+            f"{pace * INTERVAL / 1e6:,g} times as fast as real."
         )
         self.console.print(f"{faults} faults are planted in it (seed {seed}). The service does not know of them.")
+        timeless = [each.id for each in self.settings.characteristics if each.payload is None or not each.payload.time]
+        if timeless:
+            self.console.print(f"Readings without a time get that of their arrival: {', '.join(timeless)}.")
 
     def addresses(self, service: Service) -> None:
         """Print where the running demo can be looked at."""
