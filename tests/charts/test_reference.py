@@ -3,6 +3,7 @@
 from math import isnan
 
 import numpy as np
+import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
@@ -85,3 +86,12 @@ def test_the_bank_agrees_with_the_definitions(case: tuple[Detector, list[float],
                 assert abs(notice["shift_sigma"] - float(wanted.shift_sigma)) < 1e-8
                 assert abs(notice["shift"] - float(wanted.shift_sigma) * detector.sigma) < 1e-8
     assert not notices
+
+
+@pytest.mark.parametrize(("centre", "sigma"), [(10.0, 0.1), (10.0, 0.3), (5.6, 0.12), (8.7, 0.08)])
+def test_onsets_that_tie_on_paper_tie_in_binary_and_the_latest_counts(centre: float, sigma: float) -> None:
+    """One point at 2 sigma, and four at 1 on average, are equally likely changes; binary fractions told them apart."""
+    values = [round(centre + z * sigma, 6) for z in (1, 0.5, 0.5, 2)]
+    detector = Detector(centre, sigma, rules={Rule.SAME_SIDE: 4})
+    assert judged(detector, values).notices["onset_number"].tolist() == [4]
+    assert [point.onset for point in reference.judge(values, detector) if point.notice] == [4]

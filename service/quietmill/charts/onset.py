@@ -24,6 +24,9 @@ SPREAD: Final = int(Rule.SPREAD)
 LEVEL_RULES: Final = (BEYOND_LIMITS, SAME_SIDE, TWO_OF_THREE, FOUR_OF_FIVE, EWMA, CUSUM)
 """Rules that speak of the level, in the order of the table; the first that starts decides."""
 
+CLEARLY: Final = 1 + 1e-9
+"""How many times as likely an earlier onset must be to win: what ties on paper differs in binary by its last bits."""
+
 
 @compiled
 def window_of(row: Record, bits: int) -> int:
@@ -61,11 +64,11 @@ def date_change(row: Record, state: Record, pool: Record, bits: int) -> None:
     """Write onset and shift of a signal that rules `bits` raise at the point just kept.
 
     Rules on a level: the maximum-likelihood change point for a known baseline, the t that maximises (T - t) times
-    the squared mean of z after t, that mean having the signal's sign; the onset is the point after t. Samuel,
-    Pignatiello and Calvin, Quality Engineering 10 (1998) 521-527. Where a CUSUM alone signals, t is not before the
-    last zero of its arm; where that zero is older than the points kept, the arm itself tells. Patterns and the spread
-    chart: the first point of the window, and the shift is NaN. A level rule decides before a pattern, then the order
-    of the table.
+    the squared mean of z after t (the latest, if equal), that mean having the signal's sign; the onset is the point
+    after t. Samuel, Pignatiello and Calvin, Quality Engineering 10 (1998) 521-527. Where a CUSUM alone signals, t is
+    not before the last zero of its arm; where that zero is older than the points kept, the arm itself tells. Patterns
+    and the spread chart: the first point of the window, and the shift is NaN. A level rule decides before a pattern,
+    then the order of the table.
     """
     number = state.number
     oldest = max(state.first, number - row.kept + 1)
@@ -103,7 +106,7 @@ def date_change(row: Record, state: Record, pool: Record, bits: int) -> None:
         total_z += sign * kept.z
         total_deviation += kept.value - row.centre
         likelihood = total_z * total_z / count
-        if total_z > 0.0 and likelihood > best:
+        if total_z > 0.0 and likelihood > best * CLEARLY:
             best = likelihood
             onset = candidate
             best_z = total_z / count
