@@ -28,26 +28,44 @@ def judged(detector: Detector, values: Sequence[float], times: Sequence[int] | N
     return Bank([detector]).judge(readings_of(values, 0, times))
 
 
-def comparable(verdicts: Verdicts) -> list[tuple]:
-    """Return verdicts by row as bytes, without indices into the batch."""
+def comparable(readings: np.ndarray, verdicts: Verdicts) -> list[tuple]:
+    """Return the verdicts of readings row by row, without their indices into the batch."""
     points, notices = verdicts.points.copy(), verdicts.notices.copy()
     points["reading"] = notices["point"] = 0
+    clocks = np.zeros(len(readings), bool)
+    clocks[verdicts.set_back] = True
     found = []
-    for row in np.unique(points["row"]).tolist():
-        told = notices["row"] == row
+    for row in np.unique(readings["row"]).tolist():
+        own, told = readings["row"] == row, notices["row"] == row
         found.append(
-            (row, points[points["row"] == row].tobytes(), notices[told].tobytes(), verdicts.recent[told].tobytes())
+            (
+                row,
+                verdicts.outcomes[own].tobytes(),
+                points[points["row"] == row].tobytes(),
+                notices[told].tobytes(),
+                verdicts.recent[told].tobytes(),
+                clocks[own].tobytes(),
+            )
         )
     return found
 
 
 def joined(parts: Sequence[Verdicts]) -> Verdicts:
+    """Return the verdicts of batches as those of one, their indices counted through."""
+    readings = [0, *itertools.accumulate(len(part.outcomes) for part in parts)]
+    points, notices = [], []
+    for part, before in zip(parts, readings, strict=False):
+        made, told = np.array(part.points).view(POINT), np.array(part.notices).view(NOTICE)
+        made["reading"] += before
+        told["point"] += sum(len(each) for each in points)
+        points.append(made)
+        notices.append(told)
     return Verdicts(
         np.concatenate([part.outcomes for part in parts]),
-        np.concatenate([np.asarray(part.points).view(POINT) for part in parts]),
-        np.concatenate([np.asarray(part.notices).view(NOTICE) for part in parts]),
+        np.concatenate(points),
+        np.concatenate(notices),
         np.concatenate([part.recent for part in parts]),
-        np.concatenate([part.set_back for part in parts]),
+        np.concatenate([part.set_back + before for part, before in zip(parts, readings, strict=False)]),
     )
 
 
@@ -58,18 +76,27 @@ def in_cuts(detectors: Sequence[Detector], readings: np.ndarray, cuts: Sequence[
     return joined([bank.judge(readings[a:b]) for a, b in itertools.pairwise(edges)])
 
 
-def every_way(detectors: Sequence[Detector], readings: np.ndarray, seed: int = 0) -> list[Verdicts]:
-    """Judge readings at once, singly, in random cuts and with the rows interleaved otherwise."""
+def in_other_company(readings: np.ndarray, seed: int) -> np.ndarray:
+    """Return the readings with their rows mixed otherwise, each row's own in their order."""
+    places = np.arange(len(readings))
+    rows = np.random.default_rng(seed).permutation(readings["row"])
+    order = np.empty(len(readings), np.int64)
+    for row in np.unique(rows):
+        order[rows == row] = places[readings["row"] == row]
+    return readings[order]
+
+
+def every_way(detectors: Sequence[Detector], readings: np.ndarray, seed: int = 0) -> list[list[tuple]]:
+    """Judge readings at once, singly, in random cuts and in other company; return what each way says."""
     stream, count = random.Random(seed), len(readings)
-    shuffled = sorted(range(count), key=lambda place: (stream.random(),))
-    order = {
-        row: iter([place for place in range(count) if readings["row"][place] == row])
-        for row in set(readings["row"].tolist())
-    }
-    interleaved = readings[[next(order[int(readings["row"][place])]) for place in shuffled]]
+    cuts = [
+        [],
+        range(1, count),
+        sorted(stream.sample(range(1, count), min(7, count - 1))),
+        sorted(stream.choices(range(count + 1), k=5)),  # some of them empty batches
+    ]
+    mixed = in_other_company(readings, seed)
     return [
-        in_cuts(detectors, readings, []),
-        in_cuts(detectors, readings, range(1, count)),
-        in_cuts(detectors, readings, sorted(stream.sample(range(1, count), min(7, count - 1)))),
-        in_cuts(detectors, interleaved, []),
+        *(comparable(readings, in_cuts(detectors, readings, places)) for places in cuts),
+        comparable(mixed, in_cuts(detectors, mixed, cuts[2])),
     ]

@@ -30,8 +30,11 @@ class Point:
     ewma: Fraction = Fraction(0)
     high: Fraction = Fraction(0)
     low: Fraction = Fraction(0)
+    spread: Fraction | None = None
     notice: str = ""
     joined: set[tuple[Rule, int]] = field(default_factory=set)
+    members: list[tuple[Rule, int]] = field(default_factory=list)  # in the order of joining
+    raised: int = 0
     onset: int = 0
     shift_sigma: Fraction | None = None
 
@@ -94,7 +97,8 @@ def judge(values: Sequence[float], detector: Detector, times: Sequence[int] | No
     high = low = exact(cusum.head_start) if cusum else Fraction(0)
     zero = {HIGH: 0, LOW: 0}  # number of the last point at which an arm was zero
     returned = quiet = 0
-    members: set[tuple[Rule, int]] | None = None
+    episode: Point | None = None  # the point that raised the open one
+    members: list[tuple[Rule, int]] = []
     begin = 0
     for place in range(len(z)):
         number = place + 1
@@ -113,24 +117,25 @@ def judge(values: Sequence[float], detector: Detector, times: Sequence[int] | No
             high, low = (high, low) if cap is None else (min(high, cap), min(low, cap))
             zero[HIGH] = number if high == 0 else zero[HIGH]
             zero[LOW] = number if low == 0 else zero[LOW]
-        if detector.spread_signals and place > begin:
-            spread = abs(z[place] - z[place - 1])
+        spread = abs(z[place] - z[place - 1]) if place > begin else None
+        if detector.spread_signals and spread is not None:
             holds |= {(Rule.SPREAD, HIGH)} if spread > SPREAD_UPPER else set()
         side = {"both": HIGH | LOW, "high": HIGH, "low": LOW}[detector.side]
         holds = {(rule, way) for rule, way in holds if rule in UNDIRECTED or way & side}
-        point = Point(holds, z[place], average, high, low)
-        if holds and members is None:
-            point.notice, point.joined, members, quiet = "RAISED", holds, set(holds), 0
+        point = Point(holds, z[place], average, high, low, spread)
+        if holds and episode is None:
+            point.notice, point.raised, members, episode = "RAISED", number, [], point
             date(point, z, number, detector, returned, zero)
-        elif holds and members is not None:
-            quiet = 0
-            point.joined = holds - members
-            point.notice = "JOINED" if point.joined else ""
-            members |= holds
-        elif members is not None:
-            quiet += 1
+        if episode is not None:
+            quiet = 0 if holds else quiet + 1
+            point.joined = holds - set(members)
+            members = members + sorted(point.joined)
+            point.members = members
+            point.raised, point.onset, point.shift_sigma = episode.raised, episode.onset, episode.shift_sigma
+            if point.joined and not point.notice:
+                point.notice = "JOINED"
             if quiet == detector.quiet_points:
-                point.notice, members, returned = "RETURNED", None, number
+                point.notice, episode, returned = "RETURNED", None, number
         points.append(point)
     return points
 
@@ -138,7 +143,13 @@ def judge(values: Sequence[float], detector: Detector, times: Sequence[int] | No
 def date(
     point: Point, z: Sequence[Fraction], number: int, detector: Detector, returned: int, zero: dict[int, int]
 ) -> None:
-    """Write the onset of a signal raised at point `number`, and its size in sigmas."""
+    """Write the onset of a signal raised at point `number`, and its size in sigmas.
+
+    `returned` is the number of the point at which the last episode returned, `zero` that of the last zero of each arm.
+    Every point may be the first after the change, from the last of: the first kept, the first after `returned`, and
+    for a CUSUM alone the first after its arm's zero. Where that is older than the points kept, the arm itself tells,
+    unless an episode returned since.
+    """
     oldest = max(1, number - detector.points_kept + 1)
     levels = sorted((rule, side) for rule, side in point.holds if rule in LEVEL_RULES)
     if not levels:

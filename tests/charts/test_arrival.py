@@ -1,10 +1,13 @@
 """Which readings are news: a sentence an edge."""
 
 import numpy as np
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
+from charts.arrivals import Reading, outcomes_of
 from charts.feeding import readings_of
 from quietmill.charts.bank import Bank
-from quietmill.model import NO_TIME, Detector, Outcome, Rule
+from quietmill.model import NO_TIME, READING, Detector, Outcome, Rule
 
 RULES = {Rule.BEYOND_LIMITS: 3.0}
 SECOND = 1_000_000
@@ -107,3 +110,61 @@ def test_times_that_do_not_rise_set_no_clock_back() -> None:
 
 def test_without_arrivals_no_clock_is_set_back() -> None:
     assert set_back(40, arrival_step=10, arrivals=False) == ([A] + [L] * 40, [])
+
+
+def test_a_backlog_that_comes_as_fast_as_it_can_still_sets_the_clock_back_once_its_pace_is_real() -> None:
+    batch = readings_of(np.arange(40.0), times=[10_000 * SECOND, *(1000 * SECOND + 10 * SECOND * n for n in range(39))])
+    arrivals = [0, *range(25), *(24 + 30 * n for n in range(1, 15))]
+    batch["arrival"] = [20_000 * SECOND + arrival * SECOND for arrival in arrivals]
+    verdicts = Bank([Detector(0.0, 1.0, rules=RULES)]).judge(batch)
+    # from the first late reading on: 24 s + 30 s a reading against half of 240 s + 10 s a reading
+    assert verdicts.set_back.tolist() == [29]
+    assert verdicts.outcomes.tolist() == [A] + [L] * 28 + [A] * 11
+
+
+def test_an_accepted_reading_ends_the_late_ones_in_a_row() -> None:
+    times = [10_000, *range(1000, 1190, 10), 10_001, *range(1190, 1380, 10)]
+    batch = readings_of(np.arange(40.0), times=[time * SECOND for time in times])
+    batch["arrival"] = batch["time"][0] + np.arange(40) * 10 * SECOND
+    assert outcomes(Bank([Detector(0.0, 1.0, rules=RULES)]), batch) == [A] + [L] * 19 + [A] + [L] * 19
+
+
+@st.composite
+def arriving(draw: st.DrawFn) -> tuple[Detector, list[Reading]]:
+    """Readings of a sender whose clock and counter halt, jump and repeat, and that sends old ones again."""
+    detector = Detector(
+        0.0,
+        1.0,
+        rules=RULES,
+        timed=draw(st.integers(0, 9)) > 0,
+        sequenced=draw(st.integers(0, 3)) == 0,
+        sequence_size=draw(st.sampled_from([0, 0, 15, 256, 65536])),
+    )
+    clock = st.sampled_from([-2, -1, 0, 0, 1, 1, 2])
+    counter = st.sampled_from([0, 1, 1, 1, -1, -7, -8, -128, -129, -1000, -1001])
+    readings = [Reading(1000, 0, 0, 5000, draw(st.integers(0, 3000)))]
+    for _ in range(draw(st.integers(1, 12))):  # stretches: a jump, then an even pace, or none
+        time, message, arrival, sequence = readings[-1].time, *readings[-1][2:]
+        time += draw(st.sampled_from([0, 0, -1, -5, -60]))
+        pace, delay, even = draw(st.integers(1, 4)), draw(st.integers(0, 2)), draw(st.booleans())
+        for _ in range(draw(st.integers(1, 28))):
+            time += pace if even else draw(clock)
+            sequence += 1 if even else draw(counter)
+            message += 1 if even else draw(st.integers(0, 1))
+            arrival += delay
+            fingerprint = 0 if even else draw(st.integers(0, 1))
+            readings.append(Reading(time, fingerprint, message, arrival, sequence))
+    return detector, readings
+
+
+@settings(max_examples=150)
+@given(arriving())
+def test_outcomes_agree_with_the_definitions(case: tuple[Detector, list[Reading]]) -> None:
+    detector, readings = case
+    batch = np.zeros(len(readings), READING)
+    for name, column in zip(Reading._fields, zip(*readings, strict=True), strict=True):
+        batch[name] = column
+    verdicts = Bank([detector]).judge(batch)
+    found, set_back = outcomes_of(readings, detector)
+    assert verdicts.outcomes.tolist() == found
+    assert verdicts.set_back.tolist() == set_back

@@ -10,7 +10,7 @@ from pathlib import Path
 import pytest
 
 from charts import reference
-from charts.feeding import judged
+from charts.feeding import every_way, judged, readings_of
 from quietmill.model import COUNTS, Cusum, Detector, Ewma, Rule, rules_in
 
 SERIES = json.loads((Path(__file__).parent / "series.json").read_text())
@@ -65,6 +65,14 @@ def test_the_statistics_at_every_point_are_those_of_the_series(name: str) -> Non
     for column, texts in entry["statistics"].items():
         for text, value in zip(texts, points[columns[column]].tolist(), strict=True):
             assert isnan(value) if text == "" else value == pytest.approx(float(text), rel=1e-8, abs=1e-8)
+
+
+@pytest.mark.parametrize("name", SERIES)
+def test_every_way_of_feeding_a_series_says_the_same(name: str) -> None:
+    readings = readings_of([float(value) for value in SERIES[name]["points"]])
+    first, *others = every_way([detector_of(SERIES[name])], readings)
+    for other in others:
+        assert other == first
 
 
 def test_the_limits_of_the_nist_flow_rates_are_the_published_ones() -> None:
