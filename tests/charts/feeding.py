@@ -12,7 +12,7 @@ from quietmill.model import NO_TIME, NOTICE, POINT, READING, Detector, Verdicts
 MINUTE = 60_000_000
 
 
-def readings_of(values: Sequence[float], row: int = 0, times: Sequence[int] | None = None) -> np.ndarray:
+def readings_of(values: Sequence[float] | np.ndarray, row: int = 0, times: Sequence[int] | None = None) -> np.ndarray:
     """Return a series as readings a minute apart, each a message of its own."""
     readings = np.zeros(len(values), READING)
     readings["row"] = row
@@ -24,7 +24,7 @@ def readings_of(values: Sequence[float], row: int = 0, times: Sequence[int] | No
     return readings
 
 
-def judged(detector: Detector, values: Sequence[float], times: Sequence[int] | None = None) -> Verdicts:
+def judged(detector: Detector, values: Sequence[float] | np.ndarray, times: Sequence[int] | None = None) -> Verdicts:
     return Bank([detector]).judge(readings_of(values, 0, times))
 
 

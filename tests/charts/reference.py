@@ -8,7 +8,7 @@ import itertools
 from collections.abc import Sequence
 from dataclasses import dataclass, field
 from fractions import Fraction
-from math import pi, sqrt
+from math import inf, pi, sqrt
 
 from quietmill.model import LEVEL_RULES, UNDIRECTED, Detector, Rule
 
@@ -76,59 +76,70 @@ def rules_at(z: Sequence[Fraction], detector: Detector) -> set[tuple[Rule, int]]
     return {(rule, side) for rule, side in found.items() if side and rule in rules}
 
 
-def beyond_ewma(average: Fraction, t: int, detector: Detector) -> int:
-    """Compare squares, so that no root has to be taken."""
-    assert detector.ewma is not None
+def averages(z: Sequence[Fraction], detector: Detector) -> list[tuple[Fraction, set[tuple[Rule, int]]]]:
+    """Return the EWMA of z at every point and whether it holds; squares are compared, so that no root is taken."""
+    if detector.ewma is None:
+        return [(Fraction(0), set())] * len(z)
     lam, width = exact(detector.ewma.lam), exact(detector.ewma.width)
-    square = width**2 * lam / (2 - lam) * (1 - (1 - lam) ** (2 * t) if detector.ewma.exact else 1)
-    if average**2 <= square:
-        return 0
-    return HIGH if average > 0 else LOW
+    average, found = Fraction(0), []
+    for t, value in enumerate(z, start=1):
+        average = lam * value + (1 - lam) * average
+        square = width**2 * lam / (2 - lam) * (1 - (1 - lam) ** (2 * t) if detector.ewma.exact else 1)
+        beyond = average**2 > square
+        found.append((average, {(Rule.EWMA, HIGH if average > 0 else LOW)} if beyond else set()))
+    return found
+
+
+def arm(z: Sequence[Fraction], detector: Detector, side: int) -> list[tuple[Fraction, set[tuple[Rule, int]]]]:
+    """Return one arm of the CUSUM of z at every point and whether it holds."""
+    cusum = detector.cusum
+    if cusum is None:
+        return [(Fraction(0), set())] * len(z)
+    k, h, total = exact(cusum.k), exact(cusum.h), exact(cusum.head_start)
+    found = []
+    for value in z:
+        total = max(Fraction(0), total + (value if side == HIGH else -value) - k)
+        beyond = total > h
+        if cusum.ceiling < inf:
+            total = min(total, exact(cusum.ceiling) * h)
+        found.append((total, {(Rule.CUSUM, side)} if beyond else set()))
+    return found
 
 
 def judge(values: Sequence[float], detector: Detector, times: Sequence[int] | None = None) -> list[Point]:
     """Return what a detector says of a series, point by point. `times` in microseconds matter for gaps only."""
     centre, sigma = exact(detector.centre), exact(detector.sigma)
-    x = [exact(value) for value in values]
-    z = [(value - centre) / sigma for value in x]
+    z = [(exact(value) - centre) / sigma for value in values]
+    sides = {"both": HIGH | LOW, "high": HIGH, "low": LOW}[detector.side]
+    arms = {side: arm(z, detector, side) for side in (HIGH, LOW)}
     points: list[Point] = []
-    average = Fraction(0)
-    cusum = detector.cusum
-    high = low = exact(cusum.head_start) if cusum else Fraction(0)
-    zero = {HIGH: 0, LOW: 0}  # number of the last point at which an arm was zero
+    begin = 0
+    for place, (average, beyond_average) in enumerate(averages(z, detector)):
+        if place and detector.gap and times and times[place] - times[place - 1] > detector.gap:
+            begin = place
+        spread = abs(z[place] - z[place - 1]) if place > begin else None
+        holds = rules_at(z[begin : place + 1], detector)
+        holds |= beyond_average | arms[HIGH][place][1] | arms[LOW][place][1]
+        if detector.spread_signals and spread is not None and spread > SPREAD_UPPER:
+            holds.add((Rule.SPREAD, HIGH))
+        holds = {(rule, side) for rule, side in holds if rule in UNDIRECTED or side & sides}
+        points.append(Point(holds, z[place], average, arms[HIGH][place][0], arms[LOW][place][0], spread))
+    follow(points, detector)
+    return points
+
+
+def follow(points: list[Point], detector: Detector) -> None:
+    """Write what the episode does at every point."""
     returned = quiet = 0
     episode: Point | None = None  # the point that raised the open one
     members: list[tuple[Rule, int]] = []
-    begin = 0
-    for place in range(len(z)):
-        number = place + 1
-        if place and detector.gap and times and times[place] - times[place - 1] > detector.gap:
-            begin = place
-        holds = rules_at(z[begin : place + 1], detector)
-        if detector.ewma is not None:
-            lam = exact(detector.ewma.lam)
-            average = lam * z[place] + (1 - lam) * average
-            holds |= {(Rule.EWMA, side)} if (side := beyond_ewma(average, number, detector)) else set()
-        if cusum is not None:
-            k, h = exact(cusum.k), exact(cusum.h)
-            cap = exact(cusum.ceiling) * h if cusum.ceiling != float("inf") else None
-            high, low = max(Fraction(0), high + z[place] - k), max(Fraction(0), low - z[place] - k)
-            holds |= ({(Rule.CUSUM, HIGH)} if high > h else set()) | ({(Rule.CUSUM, LOW)} if low > h else set())
-            high, low = (high, low) if cap is None else (min(high, cap), min(low, cap))
-            zero[HIGH] = number if high == 0 else zero[HIGH]
-            zero[LOW] = number if low == 0 else zero[LOW]
-        spread = abs(z[place] - z[place - 1]) if place > begin else None
-        if detector.spread_signals and spread is not None:
-            holds |= {(Rule.SPREAD, HIGH)} if spread > SPREAD_UPPER else set()
-        side = {"both": HIGH | LOW, "high": HIGH, "low": LOW}[detector.side]
-        holds = {(rule, way) for rule, way in holds if rule in UNDIRECTED or way & side}
-        point = Point(holds, z[place], average, high, low, spread)
-        if holds and episode is None:
+    for number, point in enumerate(points, start=1):
+        if point.holds and episode is None:
             point.notice, point.raised, members, episode = "RAISED", number, [], point
-            date(point, z, number, detector, returned, zero)
+            date(points[:number], detector, returned)
         if episode is not None:
-            quiet = 0 if holds else quiet + 1
-            point.joined = holds - set(members)
+            quiet = 0 if point.holds else quiet + 1
+            point.joined = point.holds - set(members)
             members = members + sorted(point.joined)
             point.members = members
             point.raised, point.onset, point.shift_sigma = episode.raised, episode.onset, episode.shift_sigma
@@ -136,20 +147,16 @@ def judge(values: Sequence[float], detector: Detector, times: Sequence[int] | No
                 point.notice = "JOINED"
             if quiet == detector.quiet_points:
                 point.notice, episode, returned = "RETURNED", None, number
-        points.append(point)
-    return points
 
 
-def date(
-    point: Point, z: Sequence[Fraction], number: int, detector: Detector, returned: int, zero: dict[int, int]
-) -> None:
-    """Write the onset of a signal raised at point `number`, and its size in sigmas.
+def date(points: Sequence[Point], detector: Detector, returned: int) -> None:
+    """Write the onset of a signal raised at the last of the points, and its size in sigmas.
 
-    `returned` is the number of the point at which the last episode returned, `zero` that of the last zero of each arm.
-    Every point may be the first after the change, from the last of: the first kept, the first after `returned`, and
-    for a CUSUM alone the first after its arm's zero. Where that is older than the points kept, the arm itself tells,
-    unless an episode returned since.
+    `returned` is the number of the point at which the last episode returned. Every point may be the first after the
+    change, from the last of: the first kept, the first after `returned`, and for a CUSUM alone the first after its
+    arm's zero. Where that is older than the points kept, the arm itself tells, unless an episode returned since.
     """
+    point, number = points[-1], len(points)
     oldest = max(1, number - detector.points_kept + 1)
     levels = sorted((rule, side) for rule, side in point.holds if rule in LEVEL_RULES)
     if not levels:
@@ -164,19 +171,17 @@ def date(
         point.onset = max(oldest, number - windows[first] + 1)
         return
     rule, side = levels[0]
-    sign = 1 if side == HIGH else -1
-    earliest = max(oldest, returned + 1)
+    candidates = range(max(oldest, returned + 1), number + 1)
     if rule is Rule.CUSUM:
-        if zero[side] + 1 < oldest and zero[side] >= returned:
-            point.onset = zero[side] + 1
-            point.shift_sigma = sum(z[point.onset - 1 : number], Fraction(0)) / (number - point.onset + 1)
-            return
-        earliest = max(earliest, zero[side] + 1)
-    best: tuple[Fraction, int] | None = None
-    for onset in range(earliest, number + 1):
-        total = sum(z[onset - 1 : number], Fraction(0))
-        count = number - onset + 1
-        if total * sign > 0 and (best is None or total**2 / count >= best[0]):
-            best = (total**2 / count, onset)
-    point.onset = best[1] if best else number
-    point.shift_sigma = sum(z[point.onset - 1 : number], Fraction(0)) / (number - point.onset + 1)
+        sums = [each.high if side == HIGH else each.low for each in points]
+        zero = max((place for place, total in enumerate(sums, start=1) if total == 0), default=0)
+        if returned <= zero < oldest - 1:
+            candidates = range(zero + 1, zero + 2)
+        else:
+            candidates = range(max(candidates.start, zero + 1), number + 1)
+    best = Fraction(-1)
+    for onset in candidates:
+        since = points[onset - 1 :]
+        mean = sum((each.z for each in since), Fraction(0)) / len(since)
+        if (mean > 0) == (side == HIGH) and mean**2 * len(since) >= best:
+            best, point.onset, point.shift_sigma = mean**2 * len(since), onset, mean

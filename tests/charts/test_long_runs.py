@@ -6,6 +6,7 @@ import numpy as np
 
 from charts.feeding import readings_of
 from quietmill.charts.bank import Bank
+from quietmill.charts.layout import STATE
 from quietmill.model import Cusum, Detector, Ewma
 
 TINY = np.finfo(np.float64).tiny
@@ -15,7 +16,7 @@ DETECTOR = Detector(0.0, 1.0, ewma=Ewma(0.05, 2.6), cusum=Cusum(0.5, 5))
 def test_points_on_the_centre_after_an_excursion_leave_no_denormal_numbers() -> None:
     bank = Bank([DETECTOR])
     bank.judge(readings_of([3.0, -2.0, *[0.0] * 200_000]))
-    for name in bank.state.dtype.names:
+    for name in STATE.fields or ():
         if bank.state.dtype[name].kind == "f":
             value = abs(float(bank.state[name][0]))
             assert value == 0 or isnan(value) or value >= TINY, name
