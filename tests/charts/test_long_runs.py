@@ -1,10 +1,11 @@
 """State that is carried for ever stays exact and fast."""
 
-from math import isnan
+from math import isnan, sqrt
 
 import numpy as np
+import pytest
 
-from charts.feeding import readings_of
+from charts.feeding import judged, readings_of
 from quietmill.charts.bank import Bank
 from quietmill.charts.layout import STATE
 from quietmill.model import Cusum, Detector, Ewma
@@ -32,6 +33,18 @@ def test_the_limits_of_an_ewma_become_asymptotic_and_stay() -> None:
     late = slice(1000, None)
     one, other = asymptotic.judge(readings_of(values)).points, exact.judge(readings_of(values)).points
     assert one["bits"][late].tolist() == other["bits"][late].tolist()
+
+
+@pytest.mark.parametrize(("factor", "signals"), [(1 + 1e-7, True), (1 - 1e-7, False)])
+def test_the_limits_of_an_ewma_are_exact_at_every_point(factor: float, signals: bool) -> None:
+    """A series made so that the average follows its limit just outside, or just inside."""
+    lam, width, average, values = 0.05, 2.6, 0.0, []
+    for t in range(1, 500):
+        wanted = factor * width * sqrt(lam / (2 - lam) * (1 - (1 - lam) ** (2 * t)))
+        values.append((wanted - (1 - lam) * average) / lam)
+        average = wanted
+    bits = judged(Detector(0.0, 1.0, ewma=Ewma(lam, width)), values).points["bits"]
+    assert ((bits != 0) == signals).all()
 
 
 def test_a_ceiling_bounds_how_long_a_sum_takes_to_come_back() -> None:

@@ -44,8 +44,8 @@ def test_a_tie_on_paper_that_binary_fractions_break_is_a_tie() -> None:
 
 
 def test_the_mean_since_the_onset_has_the_sign_of_the_signal() -> None:
-    assert raised_by(Detector(0.0, 1.0, rules=BEYOND), [-2.5, -2.5, -2.5, -2.5, 3.5]) == [(5, 5, 3.5)]
-    assert raised_by(Detector(0.0, 1.0, rules=BEYOND), [2.5, 2.5, 2.5, 2.5, -3.5]) == [(5, 5, -3.5)]
+    assert raised_by(Detector(0.0, 1.0, rules=BEYOND), [*[-2.5] * 10, 3.5]) == [(11, 11, 3.5)]
+    assert raised_by(Detector(0.0, 1.0, rules=BEYOND), [*[2.5] * 10, -3.5]) == [(11, 11, -3.5)]
 
 
 def test_no_onset_lies_before_the_return_of_the_episode_before() -> None:
